@@ -1,0 +1,40 @@
+"""Measured randomness: Gumbel noise on the log score.
+
+Taking the k greatest of log score + temperature · Gumbel noise draws without replacement with chances in proportion to
+score^(1/temperature), the Plackett-Luce model (Kool, van Hoof and Welling, "Stochastic Beams and Where to Find Them",
+ICML 2019). The noise is a function of a seed and the post, so the pages of one feed agree.
+"""
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+def gumbel(seed: int, post: NDArray[np.uint64]) -> NDArray[np.float64]:
+    """Return standard Gumbel noise for each post.
+
+    Args:
+        seed: 0 to 2^64 - 1.
+        post: Hashes, shape (n,).
+
+    Returns:
+        Noise, shape (n,), the same for the same seed and post.
+    """
+    uniform = (_mix(post ^ _mix(np.array([seed], dtype=np.uint64))) >> np.uint64(11)).astype(np.float64)
+    noise: NDArray[np.float64] = -np.log(-np.log((uniform + 0.5) * 2.0**-53))
+    return noise
+
+
+def multipliers(seed: int, post: NDArray[np.uint64], temperature: float) -> NDArray[np.float64]:
+    """Return what each score is multiplied by to draw an order: exp(temperature · noise), 1.0 at temperature 0."""
+    if temperature == 0.0:
+        return np.ones(len(post))
+    scaled: NDArray[np.float64] = np.exp(np.clip(temperature * gumbel(seed, post), -600.0, 600.0))
+    return scaled
+
+
+def _mix(value: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    """Scramble 64 bits (the finaliser of SplitMix64; Steele, Lea and Flood, OOPSLA 2014)."""
+    value = value + np.uint64(0x9E3779B97F4A7C15)
+    value = (value ^ (value >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+    value = (value ^ (value >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+    return value ^ (value >> np.uint64(31))

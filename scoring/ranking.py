@@ -1,0 +1,82 @@
+"""A policy made ready to rank: weights and gains by kind code, the curve on the bank."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scoring.bank import Bank, BankFit, fit
+from scoring.policy import Policy
+
+Values = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Ranking:
+    """A compiled policy.
+
+    Attributes:
+        policy: The policy.
+        bank: The bank of the store.
+        fit: The curve on the bank.
+        weights: Weight by kind code, shape (codes,).
+        gains: Gain by kind code, shape (codes,).
+    """
+
+    policy: Policy
+    bank: Bank
+    fit: BankFit
+    weights: Values
+    gains: Values
+
+    def freshness(self, age_ms: Values) -> Values:
+        """Return the policy's freshness at ages, of the same shape."""
+        return self.policy.curve.freshness(age_ms)
+
+    def crowd_freshness(self, age_ms: Values) -> Values:
+        """Return what the bank makes of the freshness at ages, of the same shape: what running sums decay by."""
+        if self.fit.exact:
+            return self.policy.curve.freshness(age_ms)
+        half_lives = np.array(self.bank.half_lives_ms)
+        followed: Values = np.exp2(np.maximum(age_ms, 0.0)[..., None] / -half_lives) @ self.fit.coefficients
+        return followed
+
+    def ceiling_over(self, slot: int, horizon_ms: float) -> float:
+        """Bound the crowd's freshness by a multiple of one half-life of the bank.
+
+        Args:
+            slot: Place of the half-life in the bank.
+            horizon_ms: Greatest age, milliseconds.
+
+        Returns:
+            The smallest c found with crowd_freshness(age) <= c · 2^(-age / half_life) at ages 0 to horizon; each
+            step between checked ages is allowed for.
+        """
+        half_life = self.bank.half_lives_ms[slot]
+        ages = np.linspace(0.0, horizon_ms, 4097)
+        step = ages[1]
+        with np.errstate(over="ignore"):
+            ratio = np.max(self.crowd_freshness(ages) * np.exp2(ages / half_life))
+        return float(ratio * 2.0 ** (step / half_life)) if np.isfinite(ratio) else float("inf")
+
+
+def compile_policy(policy: Policy, bank: Bank, kinds: Sequence[str], horizon_ms: float) -> Ranking:
+    """Make a policy ready to rank.
+
+    Args:
+        policy: The policy.
+        bank: The bank of the store.
+        kinds: Name of each kind code.
+        horizon_ms: Greatest age that the curve must be followed to: retention, milliseconds.
+
+    Raises:
+        CurveError: The bank cannot follow the policy's curve.
+    """
+    return Ranking(
+        policy,
+        bank,
+        fit(policy.curve, bank, horizon_ms, signed=True),
+        policy.weights_for(kinds),
+        policy.gains_for(kinds),
+    )

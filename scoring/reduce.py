@@ -1,0 +1,102 @@
+"""The reduction: from the edges of a reader's circle to one number for each candidate.
+
+    score(V, P) = Σ over the circle's edges e on P: affinity(e) · weight(e) · f(e)
+                + stranger · (crowd(P) - Σ over the circle's edges e on P: weight(e) · g(e))
+
+where f is the policy's freshness and g what the bank makes of it: crowd(P) counts every edge of P with g, so the
+circle's share is taken out of it again exactly.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scoring.affinity import FOLLOW, FRIEND, Circle
+from scoring.edges import EdgeRows
+from scoring.ranking import Ranking
+
+
+@dataclass(frozen=True, slots=True)
+class Candidates:
+    """Posts with an edge by someone the reader follows or befriended.
+
+    Attributes:
+        post: Hashes, shape (n,), uint64, ascending.
+        known: What the circle's edges add to each post's score, shape (n,).
+        share: The circle's share in each post's crowd, shape (n,).
+        newest_ms: Time of the newest edge by someone followed or befriended, shape (n,), Unix milliseconds.
+    """
+
+    post: NDArray[np.uint64]
+    known: NDArray[np.float64]
+    share: NDArray[np.float64]
+    newest_ms: NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class EdgeTerms:
+    """The factors of each edge's product, each of shape (n,)."""
+
+    affinity: NDArray[np.float64]
+    weight: NDArray[np.float64]
+    freshness: NDArray[np.float64]
+    crowd_freshness: NDArray[np.float64]
+
+
+def edge_terms(edges: EdgeRows, circle: Circle, ranking: Ranking, t_ms: int) -> EdgeTerms:
+    """Return the factors of each edge's product.
+
+    Args:
+        edges: Live edges; `row` is the place of the actor in the circle.
+        circle: The reader's circle.
+        ranking: The compiled policy.
+        t_ms: The time of the feed, Unix milliseconds.
+    """
+    age_ms = t_ms - edges.time_ms()
+    freshness = ranking.freshness(age_ms)
+    crowd_freshness = freshness if ranking.fit.exact else ranking.crowd_freshness(age_ms)
+    return EdgeTerms(circle.affinity[edges.row], ranking.weights[edges.code()], freshness, crowd_freshness)
+
+
+def by_ties(edges: EdgeRows, circle: Circle) -> NDArray[np.bool_]:
+    """Say which edges are by someone the reader follows or befriended, shape (n,)."""
+    chosen: NDArray[np.bool_] = np.isin(circle.relation, (FOLLOW, FRIEND))[edges.row]
+    return chosen
+
+
+def reduce_edges(edges: EdgeRows, circle: Circle, ranking: Ranking, t_ms: int) -> Candidates:
+    """Reduce the circle's edges to candidates.
+
+    Args:
+        edges: Live edges; `row` is the place of the actor in the circle.
+        circle: The reader's circle.
+        ranking: The compiled policy.
+        t_ms: The time of the feed, Unix milliseconds.
+    """
+    posts, place = np.unique(edges.post, return_inverse=True)
+    terms = edge_terms(edges, circle, ranking, t_ms)
+    known = np.bincount(place, terms.affinity * terms.weight * terms.freshness, len(posts))
+    share = np.bincount(place, terms.weight * terms.crowd_freshness, len(posts))
+    tied = by_ties(edges, circle)
+    newest_ms = _newest(place[tied], edges.time_ms()[tied], len(posts))
+    eligible = newest_ms > -np.inf
+    return Candidates(posts[eligible], known[eligible], share[eligible], newest_ms[eligible])
+
+
+def _newest(place: NDArray[np.intp], time_ms: NDArray[np.float64], count: int) -> NDArray[np.float64]:
+    """Return the greatest time for each place, -inf where there is none."""
+    newest = np.full(count, -np.inf)
+    np.maximum.at(newest, place, time_ms)
+    return newest
+
+
+def remainder(crowd: NDArray[np.float64], share: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Take the circle's share out of the crowd: what is left is 0 or more, rounding errors do not count as a crowd.
+
+    >>> remainder(np.array([0.3, 5.0]), np.array([0.1 + 0.2, 1.0]))
+    array([0., 4.])
+    """
+    left = crowd - share
+    left[left < 1e-12 * crowd] = 0.0
+    return np.maximum(left, 0.0)

@@ -1,0 +1,83 @@
+"""The crowd board: the greatest posts by everybody's edges, and a bound for all others."""
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scoring.ranking import Ranking
+from service.store import keys
+
+LISTED = 500
+"""How many of a board's posts a feed read looks at."""
+
+_CLOSE_ENOUGH = 2.0
+
+Command = tuple[bytes | str | int, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class CrowdBound:
+    """Upper bounds of the weighted crowd sum.
+
+    Attributes:
+        post: hashes of the listed posts, shape (n,), uint64, ascending.
+        bound: the bound of each, shape (n,).
+        others: the bound of every post that is not listed.
+
+    """
+
+    post: NDArray[np.uint64]
+    bound: NDArray[np.float64]
+    others: float
+
+    def of(self, posts: NDArray[np.uint64]) -> NDArray[np.float64]:
+        """Give the bound of each post, of the same shape."""
+        bounds = np.full(len(posts), self.others)
+        if len(self.post):
+            place = np.minimum(np.searchsorted(self.post, posts), len(self.post) - 1)
+            listed = self.post[place] == posts
+            bounds[listed] = self.bound[place[listed]]
+        return bounds
+
+
+class BoardReader:
+    """Reads the board that bounds a policy's crowd best.
+
+    Args:
+        ranking: the compiled policy.
+        slots: slots of the bank that have a board.
+        horizon_ms: greatest age, milliseconds.
+
+    """
+
+    def __init__(self, ranking: Ranking, slots: tuple[int, ...], horizon_ms: float) -> None:
+        ceilings = [ranking.ceiling_over(slot, horizon_ms) for slot in slots]
+        close = [place for place, ceiling in enumerate(ceilings) if ceiling <= _CLOSE_ENOUGH]
+        chosen = close[0] if close else int(np.argmin(ceilings))
+        self._slot = slots[chosen]
+        self._half_life_ms = ranking.bank.half_lives_ms[self._slot]
+        heaviest = float(ranking.weights.max(initial=0.0))
+        self._scale = ceilings[chosen] * heaviest
+
+    def commands(self) -> list[Command]:
+        """Give the commands whose answers `read` takes."""
+        return [
+            (b"ZREVRANGE", keys.board(self._slot), 0, LISTED - 1, b"WITHSCORES"),
+            (b"GET", keys.floor(self._slot)),
+        ]
+
+    def read(self, answers: list[Any], t_ms: int) -> CrowdBound:
+        """Turn the answers into bounds at a time, Unix milliseconds."""
+        flat, floor = answers
+        posts = np.frombuffer(b"".join(flat[::2]), dtype="<u8")
+        marks = np.array([float(mark) for mark in flat[1::2]])
+        lowest = marks[-1] if len(marks) == LISTED else float(floor) if floor else -np.inf
+        order = np.argsort(posts)
+        bounds = self._values(marks, t_ms)
+        return CrowdBound(posts[order], bounds[order], float(self._values(np.array([lowest]), t_ms)[0]))
+
+    def _values(self, marks: NDArray[np.float64], t_ms: int) -> NDArray[np.float64]:
+        values: NDArray[np.float64] = self._scale * np.exp2(marks - t_ms / self._half_life_ms)
+        return values * (1.0 + 1e-9)

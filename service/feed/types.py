@@ -1,0 +1,126 @@
+"""What a caller asks of a feed and what it is answered."""
+
+from dataclasses import dataclass, field
+from typing import Any, Literal
+
+Order = Literal["ranked", "newest"]
+
+
+@dataclass(frozen=True, slots=True)
+class FeedRequest:
+    """Ask for a reader's next posts.
+
+    Args:
+        reader: the reader's id.
+        k: how many posts, 1 to 200.
+        budget_ms: time that the ranking may take; None takes the setting.
+        order: by score, or by posting time without the reader's profile.
+        cursor: `next` of the page before, if any.
+        policy: name of a loaded policy; None takes the reader's assigned one.
+        as_of_ms: rank as at this time, Unix milliseconds; None is now.
+        explore: False switches the policy's randomness off.
+
+    """
+
+    reader: str
+    k: int = 20
+    budget_ms: float | None = None
+    order: Order = "ranked"
+    cursor: str | None = None
+    policy: str | None = None
+    as_of_ms: int | None = None
+    explore: bool = True
+
+
+@dataclass(frozen=True, slots=True)
+class FeedItem:
+    """One post of a feed; `score` is None where the order is newest first."""
+
+    post: str
+    author: str
+    form: str
+    posted_ms: int
+    score: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class FeedAnswer:
+    """A page of a feed.
+
+    `complete` is True only where the items are certainly the exact top k.
+    `stages_ms` holds the time of each stage, for the Server-Timing header.
+    """
+
+    reader: str
+    as_of_ms: int
+    policy: str
+    complete: bool
+    items: list[FeedItem]
+    next: str | None
+    stages_ms: dict[str, float] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class ExplainRequest:
+    """Ask why a post has its score for a reader."""
+
+    reader: str
+    post: str
+    policy: str | None = None
+    as_of_ms: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class TiePart:
+    """What one edge by a known person adds to a score."""
+
+    actor: str
+    kind: str
+    at_ms: int
+    affinity: float
+    weight: float
+    freshness: float
+    product: float
+
+
+@dataclass(frozen=True, slots=True)
+class CrowdPart:
+    """What everybody unknown to the reader adds: `affinity` times the weighted, decayed `sum`."""
+
+    affinity: float
+    sum: float
+    product: float
+
+
+@dataclass(frozen=True, slots=True)
+class Factor:
+    """A number that the sum of the parts is multiplied by."""
+
+    name: str
+    value: float
+
+
+@dataclass(frozen=True, slots=True)
+class Explanation:
+    """Every part of a score; the products add up and, times the factors, are the score."""
+
+    reader: str
+    post: str
+    as_of_ms: int
+    policy: str
+    score: float
+    factors: list[Factor]
+    ties: list[TiePart]
+    crowd: CrowdPart
+
+
+@dataclass(frozen=True, slots=True)
+class PolicyInfo:
+    """A loaded policy as callers see it; `error` is the certified error of its curve on the bank."""
+
+    name: str
+    toml: str
+    exact: bool
+    error: float
+    default: bool
+    settings: dict[str, Any]

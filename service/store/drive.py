@@ -1,0 +1,317 @@
+"""Carry out what taken events change in other buckets, and close their outbox entries.
+
+Every step may be done again: far effects are let through once by their number, and an entry is closed once. So an
+entry that a crash left open is simply driven again, by whoever sends its events again or by the sweeper.
+"""
+
+from collections.abc import Callable, Coroutine, Sequence
+from dataclasses import dataclass, field
+from itertools import groupby
+from typing import Any
+
+import orjson
+
+from service.store import calls, pieces
+from service.store.calls import Call, EdgeChange, Effect, StoreLimits
+from service.store.ids import NOBODY, IdHasher, bucket
+from service.store.pieces import Entry, Piece, Swept
+
+AUDIENCES = ("everyone", "followers", "friends", "nobody")
+RELATIONS = ("none", "follow", "friend", "mute", "block")
+MARKED = frozenset({"friend", "block"})
+
+Run = Callable[[Sequence[Call]], Coroutine[Any, Any, list[Any]]]
+
+
+@dataclass(slots=True)
+class Step:
+    """What is to be done for one entry after its far effects: further calls, then the closing one."""
+
+    follow: list[Call] = field(default_factory=list)
+    close: list[Call] = field(default_factory=list)
+
+
+class Driver:
+    """Drives outbox entries.
+
+    Args:
+        run: runs calls in order and gives their answers.
+        hasher: of ids.
+        limits: of the store.
+        board_slots: slots of the bank, from 0, that have a board.
+
+    """
+
+    def __init__(self, run: Run, hasher: IdHasher, limits: StoreLimits, board_slots: Sequence[int]) -> None:
+        self._run = run
+        self._hasher = hasher
+        self._limits = limits
+        self._board_slots = board_slots
+        self._plans: dict[bytes, Callable[[Entry, int], tuple[list[Call], Callable[[list[Any]], Step]]]] = {
+            pieces.INTERACTION: self._edges,
+            pieces.RETRACT: self._retract,
+            pieces.POST: self._post,
+            pieces.TIE: self._tie,
+            pieces.WITHDRAW: self._withdraw,
+            pieces.SWEPT: self._swept,
+        }
+
+    async def drive(self, entries: Sequence[Entry], now_ms: int, refused: dict[bytes, str]) -> None:
+        """Carry out entries together.
+
+        Args:
+            entries: none of them depends on another.
+            now_ms: now, Unix milliseconds.
+            refused: takes, by id hash, why an event was refused where its effects lie.
+
+        Raises:
+            StoreUnavailable: the store does not answer; what was not done stays in the outbox.
+
+        """
+        erasures = [entry for entry in entries if entry.pieces[0].type == pieces.ERASE]
+        for entry in erasures:
+            await self._erase(entry, now_ms, refused)
+        plans = [self._plan(entry, now_ms, refused) for entry in entries if entry.pieces[0].type != pieces.ERASE]
+        answers = await self._run([call for far, _ in plans for call in far])
+        steps, at = [], 0
+        for far, then in plans:
+            steps.append(then(answers[at : at + len(far)]))
+            at += len(far)
+        await self._run([call for step in steps for call in step.follow])
+        await self._run([call for step in steps for call in step.close])
+
+    def _plan(
+        self, entry: Entry, now_ms: int, refused: dict[bytes, str]
+    ) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        plan = self._plans[entry.pieces[0].type]
+        far, then = plan(entry, now_ms)
+
+        def noting(answers: list[Any]) -> Step:
+            self._note_refusals(entry, answers, refused)
+            return then(answers)
+
+        return far, noting
+
+    def _note_refusals(self, entry: Entry, answers: list[Any], refused: dict[bytes, str]) -> None:
+        kind, first = entry.pieces[0].type, answers[0] if answers else None
+        reason = None
+        if kind == pieces.POST and first[0] != b"ok":
+            reason = "author" if first[0] == b"author" else "hash"
+        elif kind == pieces.TIE and first:
+            reason = "erased" if first == 2 else "hash"  # noqa: PLR2004  the script's codes
+        elif kind == pieces.WITHDRAW and first != b"ok":
+            reason = "hash"
+        if reason:
+            refused[entry.pieces[0].id_hash] = reason
+        if kind == pieces.INTERACTION:
+            posts = [post for call in _by_bucket(_interactions(entry, self._hasher)) for post in call[1]]
+            flat = [answer for call in answers for answer in call]
+            for (_, _, items), answer in zip(posts, flat, strict=True):
+                if answer[0] == b"":
+                    refused.update({item.id_hash: "hash" for item in items})
+
+    def _marks(self, post: bytes, marks: Sequence[bytes]) -> list[Call]:
+        return [
+            calls.raise_mark(slot, mark, post)
+            for slot, mark in zip(self._board_slots, marks, strict=True)
+            if mark != b""
+        ]
+
+    def _edges(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        groups = _by_bucket(_interactions(entry, self._hasher))
+        effect = Effect(entry.bucket, "e", entry.seq, entry.low)
+        far = [
+            calls.add_edges(
+                effect,
+                number,
+                now_ms,
+                self._limits,
+                [
+                    (post, name, [EdgeChange("+", item.stamp, item.actor) for item in items])
+                    for post, name, items in posts
+                ],
+            )
+            for number, posts in groups
+        ]
+
+        def then(answers: list[Any]) -> Step:
+            step, found = Step(), []
+            flat = [answer for call in answers for answer in call]
+            for (post, _, items), answer in zip((post for _, posts in groups for post in posts), flat, strict=True):
+                author = b"-" if answer[0] == b"" else b"" if answer[0] == NOBODY else answer[0]
+                found += [(item.actor, item.id_hash, author) for item in items]
+                if author != b"-":
+                    step.follow += self._marks(post, answer[1:])
+            found.sort(key=lambda one: one[0])
+            people = [
+                (person, [(id_hash, author) for _, id_hash, author in group])
+                for person, group in groupby(found, key=lambda one: one[0])
+            ]
+            step.close.append(calls.settle_interactions(entry.bucket, entry.seq, people))
+            return step
+
+        return far, then
+
+    def _retract(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        body = entry.pieces[0].body
+        person, post, stamp = body[8:16], body[16:24], body[24:32]
+        effect = Effect(entry.bucket, "e", entry.seq, entry.low)
+        change = [(post, "", [EdgeChange("-", stamp, person)])]
+        far = [calls.add_edges(effect, bucket(post), now_ms, self._limits, change)]
+        return far, lambda _: Step(close=[calls.settle_event(person, entry.seq)])
+
+    def _post(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        piece = entry.pieces[0]
+        write = read_post_piece(piece, self._hasher)
+        far = [calls.put_post(Effect(entry.bucket, "p", entry.seq, entry.low), write, now_ms, self._limits)]
+
+        def then(answers: list[Any]) -> Step:
+            answer = answers[0]
+            if answer[0] != b"ok":
+                return Step(close=[calls.settle_event(write.author, entry.seq, piece.id_hash)])
+            early = {answer[2][i : i + 8] for i in range(0, len(answer[2]), 8)}
+            follow = [calls.learn_author(person, write.post, write.author) for person in sorted(early)]
+            follow += self._marks(write.post, answer[3:])
+            follow.append(calls.put_creation(write.author, entry.seq, write.post + answer[1], now_ms, self._limits))
+            return Step(follow, [calls.settle_event(write.author, entry.seq)])
+
+        return far, then
+
+    def _tie(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        tie = read_tie_piece(entry.pieces[0], self._hasher)
+        marked = RELATIONS[tie.relation] in MARKED
+        far = [calls.put_incoming(Effect(entry.bucket, "t", entry.seq, entry.low), tie, marked=marked)]
+
+        def then(answers: list[Any]) -> Step:
+            if answers[0]:
+                return Step(close=[calls.settle_event(tie.source, entry.seq)])
+            return Step(close=[calls.put_outgoing(entry.seq, tie, self._limits.oldest_ms(now_ms))])
+
+        return far, then
+
+    def _withdraw(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        event = orjson.loads(entry.pieces[0].body[8:])
+        person, post = self._hasher.hash(event["actor"]), self._hasher.hash(event["post"])
+        effect = Effect(entry.bucket, "w", entry.seq, entry.low)
+        far = [calls.withdraw_post(effect, post, event["post"], now_ms, self._limits)]
+        return far, lambda _: Step(close=[calls.settle_event(person, entry.seq)])
+
+    async def _erase(self, entry: Entry, now_ms: int, refused: dict[bytes, str]) -> None:
+        body = entry.pieces[0].body
+        person, until_ms = body[8:16], pieces.unstamp(body[16:24])[0]
+        sweep = calls.sweep_person(person, body[:8], until_ms, entry.seq, now_ms, self._limits)
+        seq, low, member = (await self._run([sweep]))[0]
+        if seq:
+            await self.drive([Entry.read(entry.bucket, low, member)], now_ms, refused)
+        await self._run([calls.settle_event(person, entry.seq)])
+
+    def _swept(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+        swept = Swept.read(entry.pieces[0].body)
+        far, posts = self._swept_edges(entry, swept, now_ms)
+        purges = _hashes_by_bucket(swept.posts)
+        purge = Effect(entry.bucket, "u", entry.seq, entry.low)
+        far += [
+            calls.purge_posts(purge, number, group, swept.person, swept.until_ms, now_ms, self._limits)
+            for number, group in purges
+        ]
+        for letter, sides, people in (("i", ("in", "mark"), swept.targets), ("o", ("tie", "out"), swept.sources)):
+            effect = Effect(entry.bucket, letter, entry.seq, entry.low)
+            far += [
+                calls.drop_relation(effect, number, sides, group, swept.person, swept.until_ms)
+                for number, group in _hashes_by_bucket(people)
+            ]
+
+        def then(answers: list[Any]) -> Step:
+            step, edges = Step(), answers[: len(posts)]
+            for group, call in zip(posts, edges, strict=True):
+                for post, answer in zip(group, call, strict=True):
+                    if answer[0] not in (b"", NOBODY):
+                        step.follow.append(calls.learn_author(swept.person, post, answer[0]))
+            for (_, group), call in zip(purges, answers[len(posts) :], strict=False):
+                step.follow += [
+                    calls.put_creation(swept.person, entry.seq, post + stamp, now_ms, self._limits)
+                    for post, stamp in zip(group, call, strict=True)
+                    if stamp != b""
+                ]
+            step.close.append(calls.settle_event(swept.person, entry.seq))
+            return step
+
+        return far, then
+
+    def _swept_edges(self, entry: Entry, swept: Swept, now_ms: int) -> tuple[list[Call], list[list[bytes]]]:
+        signed = [("-", edge) for edge in swept.taken] + [("+", edge) for edge in swept.put]
+        by_post: dict[bytes, list[EdgeChange]] = {}
+        for sign, edge in signed:
+            by_post.setdefault(edge[:8], []).append(EdgeChange(sign, edge[8:], swept.person))
+        effect, groups = Effect(entry.bucket, "e", entry.seq, entry.low), _hashes_by_bucket(list(by_post))
+        far = [
+            calls.add_edges(effect, number, now_ms, self._limits, [(post, "", by_post[post]) for post in group])
+            for number, group in groups
+        ]
+        return far, [group for _, group in groups]
+
+
+@dataclass(frozen=True, slots=True)
+class _Item:
+    id_hash: bytes
+    actor: bytes
+    stamp: bytes
+    post: bytes
+    post_id: str
+
+
+def _interactions(entry: Entry, hasher: IdHasher) -> list[_Item]:
+    items = []
+    for piece in entry.pieces:
+        body = piece.body
+        post_id = body[24:].decode()
+        items.append(_Item(body[:8], body[8:16], body[16:24], hasher.hash(post_id), post_id))
+    return items
+
+
+def _by_bucket(items: list[_Item]) -> list[tuple[int, list[tuple[bytes, str, list[_Item]]]]]:
+    """Group interactions by the post's bucket and the post; two ids with one hash stay apart."""
+    posts: dict[tuple[bytes, str], list[_Item]] = {}
+    for item in items:
+        posts.setdefault((item.post, item.post_id), []).append(item)
+    groups: dict[int, list[tuple[bytes, str, list[_Item]]]] = {}
+    for (post, post_id), group in posts.items():
+        groups.setdefault(bucket(post), []).append((post, post_id, group))
+    return list(groups.items())
+
+
+def _hashes_by_bucket(hashes: Sequence[bytes]) -> list[tuple[int, list[bytes]]]:
+    groups: dict[int, list[bytes]] = {}
+    for one in hashes:
+        groups.setdefault(bucket(one), []).append(one)
+    return list(groups.items())
+
+
+def read_post_piece(piece: Piece, hasher: IdHasher) -> calls.PostWrite:
+    """Read what a post event's piece says."""
+    event = orjson.loads(piece.body[16:])
+    return calls.PostWrite(
+        post=piece.body[8:16],
+        post_id=event["post"],
+        author=hasher.hash(event["actor"]),
+        author_id=event["actor"],
+        event_ms=event["at"],
+        event_id=event["id"],
+        audience=AUDIENCES.index(event["audience"]),
+        form=event["form"],
+        topics="\n".join(event["topics"]),
+        creation_code=event["code"],
+    )
+
+
+def read_tie_piece(piece: Piece, hasher: IdHasher) -> calls.TieWrite:
+    """Read what a tie event's piece says."""
+    event = orjson.loads(piece.body[8:])
+    return calls.TieWrite(
+        source=hasher.hash(event["actor"]),
+        target=hasher.hash(event["target"]),
+        target_id=event["target"],
+        event_ms=event["at"],
+        relation=RELATIONS.index(event["relation"]),
+        event_id=event["id"],
+    )

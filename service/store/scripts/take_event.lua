@@ -1,0 +1,30 @@
+-- use: slots, outbox, person, heard
+-- Take an event whose effects lie in other slots: a post, a tie or a withdrawal.
+-- KEYS[1] seq:{b} · KEYS[2] outbox:{b} · KEYS[3] name · KEYS[4] erased · KEYS[5] ids · KEYS[6] heard (packed) ·
+--   KEYS[7] row (packed) · KEYS[8] tie (hash)
+-- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime, ms · ARGV[4] person id ·
+--   ARGV[5] event id hash · ARGV[6] event time, ms · ARGV[7] outbox piece · ARGV[8] what earlier outstanding
+--   entries must be settled first: those that hold these bytes ('' none) · ARGV[9] most edges in the row, 0 any ·
+--   ARGV[10] most ties, 0 any · ARGV[11] the tie's target hash · ARGV[12] 1 where an erasure does not undo the event
+-- Returns {outcome, number or 0, low, outstanding entries to settle first}; outcomes as in take_interactions.lua
+-- Costs 9 to 15 commands.
+local event_ms, ttl_ms = tonumber(ARGV[6]), ARGV[3]
+local heard = redis.call('GET', KEYS[6]) or ''
+if find_slot(heard, ARGV[5], 16) or find_slot(redis.call('GET', KEYS[5]) or '', ARGV[5], 8) then
+  return { 1, 0, outbox_low(KEYS[2]), outbox_with(KEYS[2], ARGV[5]) }
+end
+local refusal = refuse_person(KEYS[3], KEYS[4], ARGV[4], ARGV[12] == '1' and math.huge or event_ms, ttl_ms)
+if refusal then
+  return { refusal, 0, 0, {} }
+end
+local row_limit, tie_limit = tonumber(ARGV[9]), tonumber(ARGV[10])
+if row_limit > 0 and redis.call('STRLEN', KEYS[7]) / 16 >= row_limit then
+  return { 4, 0, 0, {} }
+end
+if tie_limit > 0 and redis.call('HLEN', KEYS[8]) >= tie_limit and redis.call('HEXISTS', KEYS[8], ARGV[11]) == 0 then
+  return { 4, 0, 0, {} }
+end
+remember(KEYS[6], heard, ARGV[5], event_ms, tonumber(ARGV[2]), ttl_ms)
+local before = ARGV[8] ~= '' and outbox_with(KEYS[2], ARGV[8]) or {}
+local seq = put_outbox(KEYS[1], KEYS[2], ARGV[1], ARGV[7])
+return { 0, seq, outbox_low(KEYS[2]), before }

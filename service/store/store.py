@@ -1,0 +1,202 @@
+"""One store: its connection, its lasting choices (hash key, bank), its kinds, and how events get in."""
+
+import asyncio
+import os
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import structlog
+
+from scoring.bank import Bank
+from service.errors import StoreUnavailable, WaxwaneError
+from service.events.model import AnyEvent
+from service.store import keys
+from service.store.calls import Call, StoreLimits, trim_board
+from service.store.connection import Connection
+from service.store.drive import Driver
+from service.store.ids import BUCKETS, IdHasher
+from service.store.ingest import Ingest
+from service.store.kinds import KindRegistry
+from service.store.pieces import Entry
+from service.store.verdict import Verdict
+
+FORMAT = "1"
+DAY_MS = 86_400_000
+BOARD_POSTS = 10_000
+_SWEEP_EVERY_S = 5.0
+_SWEEP_AGE_US = 5_000_000
+
+log = structlog.get_logger(__name__)
+
+
+class StoreMismatchError(WaxwaneError):
+    """The store was set up in another way than the settings ask for."""
+
+
+@dataclass(frozen=True, slots=True)
+class StoreOptions:
+    """How to reach a store and what to keep in it.
+
+    Args:
+        url: address of the server.
+        bank: half-lives of the running sums; fixed when the store is first used.
+        retention_ms: age at which edges may be forgotten, milliseconds.
+        read_timeout_s: longest wait for a read, seconds.
+        write_timeout_s: longest wait for a write, seconds.
+        pool_size: most connections of each of the two pools.
+
+    """
+
+    url: str
+    bank: Bank
+    retention_ms: int
+    read_timeout_s: float = 0.5
+    write_timeout_s: float = 5.0
+    pool_size: int = 64
+
+
+def board_slots(size: int) -> tuple[int, ...]:
+    """Choose the half-lives that have a board: one short, one middling, the longest.
+
+    >>> board_slots(10), board_slots(1)
+    ((2, 4, 9), (0,))
+
+    """
+    return tuple(sorted({(size - 1) // 4, (size - 1) // 2, size - 1}))
+
+
+class Store:
+    """The state behind all feeds.
+
+    Args:
+        options: how to reach it.
+        known: says whether some loaded policy knows a kind.
+        known_kinds: lists the kinds that loaded policies know.
+
+    """
+
+    def __init__(
+        self, options: StoreOptions, *, known: Callable[[str], bool], known_kinds: Callable[[], Sequence[str]]
+    ) -> None:
+        self.options = options
+        self.connection = Connection(
+            options.url,
+            read_timeout_s=options.read_timeout_s,
+            write_timeout_s=options.write_timeout_s,
+            pool_size=options.pool_size,
+        )
+        self.kinds = KindRegistry(self.connection)
+        self.board_slots = board_slots(len(options.bank.half_lives_ms))
+        self.limits = StoreLimits(
+            ttl_ms=options.retention_ms + DAY_MS,
+            retention_ms=options.retention_ms,
+            half_lives=",".join(f"{half_life:.17g}" for half_life in options.bank.half_lives_ms),
+            boards=",".join(str(slot + 1) for slot in self.board_slots),
+            bank_size=len(options.bank.half_lives_ms),
+        )
+        self.hasher = IdHasher(b"")
+        self.meta: dict[bytes, bytes] = {}
+        self._known, self._known_kinds = known, known_kinds
+        self._set_up()
+        self._sweeper: asyncio.Task[None] | None = None
+
+    def _set_up(self) -> None:
+        self.driver = Driver(self.run, self.hasher, self.limits, self.board_slots)
+        self.ingest = Ingest(
+            self.run,
+            self.driver,
+            self.hasher,
+            self.kinds,
+            self.limits,
+            known=self._known,
+            known_kinds=self._known_kinds,
+        )
+
+    async def run(self, calls: Sequence[Call]) -> list[object]:
+        """Run calls in one round trip; every write passes through here."""
+        return await self.connection.run(calls)
+
+    async def start(self, *, sweep: bool = True) -> None:
+        """Connect, agree on the lasting choices, and finish what a crash left open.
+
+        Args:
+            sweep: also start looking for entries left open, now and again.
+
+        Raises:
+            StoreUnavailable: the server does not answer.
+            StoreMismatchError: the store has another format or bank.
+
+        """
+        await self.connection.start()
+        await self._agree()
+        await self.kinds.refresh()
+        if sweep:
+            self._sweeper = asyncio.create_task(self._sweep_forever())
+
+    async def close(self) -> None:
+        """Stop sweeping and disconnect."""
+        if self._sweeper is not None:
+            self._sweeper.cancel()
+            await asyncio.gather(self._sweeper, return_exceptions=True)
+        await self.connection.close()
+
+    async def apply(self, events: Sequence[AnyEvent], now_ms: int) -> list[Verdict]:
+        """Apply events; see `Ingest.apply`."""
+        return await self.ingest.apply(events, now_ms)
+
+    async def finish_open_entries(self, now_ms: int, older_than_us: int = 0) -> int:
+        """Drive outbox entries that were left open.
+
+        Args:
+            now_ms: now, Unix milliseconds.
+            older_than_us: leave alone entries younger than this, microseconds: others are at work on them.
+
+        Returns:
+            How many entries were driven.
+
+        """
+        newest = now_ms * 1000 - older_than_us
+        commands: list[tuple[bytes | str | int, ...]] = [
+            (b"ZRANGEBYSCORE", keys.outbox(number), b"-inf", newest, b"LIMIT", 0, 100) for number in range(BUCKETS)
+        ]
+        driven = 0
+        for number, members in enumerate(await self.connection.read_many(commands)):
+            for member in members:
+                # Nothing is known of the low mark here: 0 prunes nothing and is always true.
+                await self.driver.drive([Entry.read(number, 0, member)], now_ms, {})
+                driven += 1
+        return driven
+
+    async def trim_boards(self) -> None:
+        """Keep the boards to their greatest posts."""
+        await self.run([trim_board(slot, BOARD_POSTS) for slot in self.board_slots])
+
+    async def _agree(self) -> None:
+        bank = self.limits.half_lives
+        ours = {b"format": FORMAT.encode(), b"bank": bank.encode(), b"hash_key": os.urandom(16)}
+        await self.connection.run([Call(None, [], [b"HSETNX", keys.META, name, value]) for name, value in ours.items()])
+        self.meta = dict(await self.connection.read("HGETALL", keys.META))
+        if self.meta[b"format"] != FORMAT.encode():
+            raise StoreMismatchError(
+                f"store: its format is {self.meta[b'format'].decode()}, this program writes {FORMAT}"
+            )
+        if self.meta[b"bank"] != bank.encode():
+            raise StoreMismatchError(
+                f"bank: {bank} is not allowed: this store keeps its sums for the half-lives "
+                f"{self.meta[b'bank'].decode()} ms; allowed: the same, or a new store"
+            )
+        self.hasher = IdHasher(self.meta[b"hash_key"])
+        self._set_up()
+
+    async def _sweep_forever(self) -> None:
+        while True:
+            try:
+                server_time = await self.connection.read("TIME")
+                now_ms = int(server_time[0]) * 1000 + int(server_time[1]) // 1000
+                driven = await self.finish_open_entries(now_ms, _SWEEP_AGE_US)
+                if driven:
+                    log.info("finished_open_entries", entries=driven)
+                await self.trim_boards()
+            except StoreUnavailable as error:
+                log.warning("sweep_failed", reason=error.detail)
+            await asyncio.sleep(_SWEEP_EVERY_S)

@@ -1,0 +1,98 @@
+"""Parameters of calls: their types, their limits and how each is refused."""
+
+from collections.abc import Collection
+from typing import Annotated, Any, Final, Literal
+
+from fastapi import Path, Request
+from pydantic import BaseModel, BeforeValidator, Field, WithJsonSchema
+
+from service import times
+from service.errors import InvalidField
+from service.events.fields import NO_CONTROLS, TIME_SCHEMA, Id, not_allowed
+
+AHEAD_MS: Final = 30 * 24 * 60 * 60 * 1000
+SKEW_MS: Final = 60 * 1000
+K_MAX: Final = 200
+BUDGET_MAX_MS: Final = 10_000
+CURSOR_CHARS: Final = 1024
+
+
+def _digits(value: Any) -> Any:  # noqa: ANN401  a validator sees whatever was sent
+    if isinstance(value, str) and not (value.isascii() and value.isdigit() and len(value) < 10):  # noqa: PLR2004
+        raise not_allowed("a whole number in digits")
+    return value
+
+
+def _time(value: Any) -> int:  # noqa: ANN401  a validator sees whatever was sent
+    try:
+        return times.parse_time_text(str(value))
+    except times.TimeError as error:
+        hint = "; in a query, + is written %2B" if " " in str(value) else ""
+        raise not_allowed(times.ALLOWED + hint) from error
+
+
+PathId = Annotated[Id, Path(description="1 to 128 bytes of UTF-8, percent-encoded; a slash is written %2F")]
+Whole = BeforeValidator(_digits)
+AsOf = Annotated[int | None, BeforeValidator(_time), WithJsonSchema(TIME_SCHEMA)]
+Budget = Annotated[float, Field(ge=1, le=BUDGET_MAX_MS, allow_inf_nan=False)]
+Cursor = Annotated[str, Field(min_length=1, max_length=CURSOR_CHARS, pattern=NO_CONTROLS)]
+
+
+class ExplainQuery(BaseModel):
+    """The parameters of an explanation."""
+
+    policy: Id | None = Field(None, description="name of a loaded policy; the reader's assigned one if left out")
+    as_of: AsOf = Field(None, description="rank as at this time, from now to 30 days ahead")
+
+
+class FeedQuery(ExplainQuery):
+    """The parameters of a feed read."""
+
+    k: Annotated[int, Whole] = Field(20, ge=1, le=K_MAX, description="how many posts")
+    budget_ms: Budget | None = Field(
+        None, description="time the ranking may take on the server, milliseconds; the setting if left out"
+    )
+    order: Literal["ranked", "newest"] = Field("ranked", description="newest uses no profile of the reader")
+    cursor: Cursor | None = Field(None, description="`next` of the page before")
+    explore: Annotated[int, Whole] = Field(1, ge=0, le=1, description="0 switches the randomness off")
+
+
+def known_only(request: Request, names: Collection[str] = ()) -> None:
+    """Refuse a query that holds an unknown parameter, or one parameter twice.
+
+    Raises:
+        InvalidField: naming the parameter and those that are known.
+
+    """
+    query = request.query_params
+    known = ", ".join(names) or "none"
+    for name, value in query.multi_items():
+        if name not in names:
+            raise InvalidField(name, value, f"only these parameters: {known}")
+        if len(query.getlist(name)) > 1:
+            raise InvalidField(name, ", ".join(query.getlist(name)), "given once")
+
+
+def as_of_within(as_of_ms: int | None, now_ms: int) -> int | None:
+    """Check that a time to rank at lies from now to 30 days ahead; a clock a minute behind counts as now.
+
+    Args:
+        as_of_ms: what was asked for, Unix milliseconds.
+        now_ms: now, Unix milliseconds.
+
+    Returns:
+        The time, not before now; None where none was asked for.
+
+    Raises:
+        InvalidField: it lies outside.
+
+    >>> as_of_within(999_970_000, now_ms=1_000_000_000)
+    1000000000
+
+    """
+    if as_of_ms is None:
+        return None
+    if not now_ms - SKEW_MS <= as_of_ms <= now_ms + AHEAD_MS:
+        span = f"from now, {times.format_ms(now_ms)}, to 30 days ahead"
+        raise InvalidField("as_of", times.format_ms(as_of_ms), span)
+    return max(as_of_ms, now_ms)

@@ -1,0 +1,116 @@
+"""GET /v1/feeds/…: a reader's feed, and why a post has its score."""
+
+from typing import Annotated, Any
+
+import orjson
+from fastapi import APIRouter, Query, Request
+from starlette.responses import Response
+
+from service.feed.types import CrowdPart, ExplainRequest, Explanation, FeedAnswer, FeedItem, FeedRequest, TiePart
+from service.times import format_ms
+from service.web import clock, documents, schemas
+from service.web.middleware import arrived_s
+from service.web.parameters import ExplainQuery, FeedQuery, PathId, as_of_within, known_only
+from service.web.state import state_of
+
+router = APIRouter()
+
+
+@router.get(
+    "/v1/feeds/{reader:id}",
+    summary="Read a feed",
+    responses=documents.answers(schemas.FeedPage, 400, 410, 422, 429, 503, headers=documents.SERVER_TIMING),
+)
+async def read_feed(request: Request, reader: PathId, query: Annotated[FeedQuery, Query()]) -> Response:
+    """Rank the reader's next posts; a reader never heard of gets a feed too."""
+    known_only(request, FeedQuery.model_fields)
+    now_ms = clock.now_ms()
+    feed_request = _feed_request(reader, query, now_ms)
+    answer = await state_of(request).engine.feed(feed_request, now_ms, arrived_s(request.scope))
+    headers = {"Server-Timing": _server_timing(answer.stages_ms, clock.since_ms(arrived_s(request.scope)))}
+    return Response(orjson.dumps(_page(answer)), headers=headers, media_type="application/json")
+
+
+@router.get(
+    "/v1/feeds/{reader:id}/posts/{post:id}",
+    summary="Explain a score",
+    responses=documents.answers(schemas.ExplanationAnswer, 404, 422, 429, 503),
+)
+async def explain_score(
+    request: Request, reader: PathId, post: PathId, query: Annotated[ExplainQuery, Query()]
+) -> Response:
+    """Say why a post has its score for a reader; 404 where the reader may not see the post."""
+    known_only(request, ExplainQuery.model_fields)
+    now_ms = clock.now_ms()
+    asked = ExplainRequest(reader, post, query.policy, as_of_within(query.as_of, now_ms))
+    explanation = await state_of(request).engine.explain(asked, now_ms)
+    return Response(orjson.dumps(_explained(explanation)), media_type="application/json")
+
+
+def _feed_request(reader: str, query: FeedQuery, now_ms: int) -> FeedRequest:
+    """Ask for a page; with a cursor `as_of` is that of the first page, which may lie behind by now."""
+    return FeedRequest(
+        reader=reader,
+        k=query.k,
+        budget_ms=query.budget_ms,
+        order=query.order,
+        cursor=query.cursor,
+        policy=query.policy,
+        as_of_ms=query.as_of if query.cursor else as_of_within(query.as_of, now_ms),
+        explore=query.explore == 1,
+    )
+
+
+def _page(answer: FeedAnswer) -> dict[str, Any]:
+    return {
+        "reader": answer.reader,
+        "as_of": format_ms(answer.as_of_ms),
+        "policy": answer.policy,
+        "complete": answer.complete,
+        "items": [_item(item) for item in answer.items],
+        "next": answer.next,
+    }
+
+
+def _item(item: FeedItem) -> dict[str, Any]:
+    return {
+        "post": item.post,
+        "author": item.author,
+        "form": item.form,
+        "posted_at": format_ms(item.posted_ms),
+        "score": item.score,
+    }
+
+
+def _server_timing(stages_ms: dict[str, float], total_ms: float) -> str:
+    """Write the stages as the Server Timing specification of the W3C has them, durations in milliseconds."""
+    return ", ".join(f"{name};dur={duration:.3f}" for name, duration in {**stages_ms, "total": total_ms}.items())
+
+
+def _explained(explanation: Explanation) -> dict[str, Any]:
+    return {
+        "reader": explanation.reader,
+        "post": explanation.post,
+        "as_of": format_ms(explanation.as_of_ms),
+        "policy": explanation.policy,
+        "score": explanation.score,
+        "factors": [{"name": factor.name, "value": factor.value} for factor in explanation.factors],
+        "parts": [*map(_tie_part, explanation.ties), _crowd_part(explanation.crowd)],
+    }
+
+
+def _tie_part(part: TiePart) -> dict[str, Any]:
+    return {
+        "source": "tie",
+        "actor": part.actor,
+        "kind": part.kind,
+        "at": format_ms(part.at_ms),
+        "affinity": part.affinity,
+        "weight": part.weight,
+        "freshness": part.freshness,
+        "product": part.product,
+    }
+
+
+def _crowd_part(part: CrowdPart) -> dict[str, Any]:
+    return {"source": "crowd", "affinity": part.affinity, "sum": part.sum, "product": part.product}
