@@ -77,6 +77,7 @@ def circle(
     base = np.array([rule.stranger, rule.follow, rule.friend, 0.0, 0.0])[relation]
     age_ms = np.maximum(t_ms - dealings.time_ms, 0.0)
     gained = gains[dealings.code] * np.exp2(age_ms / -rule.half_life_ms)
-    affinity = np.clip(base + np.bincount(acts, gained, len(person)), 0.0, rule.ceiling)
+    total = np.bincount(acts, gained, len(person)).astype(np.float64, copy=False)
+    affinity = np.clip(base + total, 0.0, rule.ceiling)
     affinity[(relation == MUTE) | (relation == BLOCK) | (person == reader)] = 0.0
     return Circle(person, relation, affinity)

@@ -5,6 +5,7 @@ from numpy.typing import NDArray
 
 from scoring.edges import codes, times_ms
 from scoring.ranking import Ranking
+from scoring.reduce import sum_by
 
 Values = NDArray[np.float64]
 
@@ -23,7 +24,7 @@ def raw_sums(post: NDArray[np.intp], stamp: NDArray[np.uint64], count: int, rank
         Σ weight · freshness for each post, shape (n,).
     """
     value = ranking.weights[codes(stamp)] * ranking.crowd_freshness(t_ms - times_ms(stamp))
-    return np.bincount(post, value, count)
+    return sum_by(post, value, count)
 
 
 def running_sums(
@@ -51,4 +52,4 @@ def running_sums(
     """
     decay = np.exp2((as_of_ms - t_ms)[:, None] / np.array(ranking.bank.half_lives_ms))
     value = ranking.weights[code] * ((sums * decay) @ ranking.fit.coefficients)
-    return np.bincount(post, value, count)
+    return sum_by(post, value, count)

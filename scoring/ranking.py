@@ -73,10 +73,5 @@ def compile_policy(policy: Policy, bank: Bank, kinds: Sequence[str], horizon_ms:
     Raises:
         CurveError: The bank cannot follow the policy's curve.
     """
-    return Ranking(
-        policy,
-        bank,
-        fit(policy.curve, bank, horizon_ms, signed=True),
-        policy.weights_for(kinds),
-        policy.gains_for(kinds),
-    )
+    curve_fit = fit(policy.curve, bank, horizon_ms, signed=True)
+    return Ranking(policy, bank, curve_fit, policy.weights_for(kinds), policy.gains_for(kinds))

@@ -76,8 +76,8 @@ def reduce_edges(edges: EdgeRows, circle: Circle, ranking: Ranking, t_ms: int) -
     """
     posts, place = np.unique(edges.post, return_inverse=True)
     terms = edge_terms(edges, circle, ranking, t_ms)
-    known = np.bincount(place, terms.affinity * terms.weight * terms.freshness, len(posts))
-    share = np.bincount(place, terms.weight * terms.crowd_freshness, len(posts))
+    known = sum_by(place, terms.affinity * terms.weight * terms.freshness, len(posts))
+    share = sum_by(place, terms.weight * terms.crowd_freshness, len(posts))
     tied = by_ties(edges, circle)
     newest_ms = _newest(place[tied], edges.time_ms()[tied], len(posts))
     eligible = newest_ms > -np.inf
@@ -89,6 +89,23 @@ def _newest(place: NDArray[np.intp], time_ms: NDArray[np.float64], count: int) -
     newest = np.full(count, -np.inf)
     np.maximum.at(newest, place, time_ms)
     return newest
+
+
+def sum_by(place: NDArray[np.intp], values: NDArray[np.float64], count: int) -> NDArray[np.float64]:
+    """Add values up by place.
+
+    Args:
+        place: Where each value goes, 0 to count - 1, shape (n,).
+        values: Finite, shape (n,).
+        count: Number of places.
+
+    Returns:
+        Sums, shape (count,).
+
+    >>> sum_by(np.array([0, 2, 0]), np.array([1.0, 2.0, 3.0]), 3)
+    array([4., 0., 2.])
+    """
+    return np.bincount(place, values, count).astype(np.float64, copy=False)
 
 
 def remainder(crowd: NDArray[np.float64], share: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -1,20 +1,17 @@
 """The engine: everything behind the HTTP routes, and behind the command line."""
 
-import asyncio
 import time
 from collections.abc import Sequence
 from typing import Any
 
-import structlog
-
 from scoring.bank import DEFAULT_BANK, Bank
-from service.errors import StoreUnavailable
 from service.events.model import AnyEvent
 from service.feed.explain import Explainer
 from service.feed.export import Exporter
 from service.feed.policies import PolicyBook
 from service.feed.ranker import Ranker
 from service.feed.types import ExplainRequest, Explanation, FeedAnswer, FeedRequest, PolicyInfo
+from service.periodic import Periodic
 from service.settings import Settings, SettingsError
 from service.store.calls import Call
 from service.store.keys import POLICIES
@@ -22,8 +19,6 @@ from service.store.store import Store, StoreOptions, board_slots
 from service.store.verdict import Verdict
 
 _POLICIES_EVERY_S = 1.0
-
-log = structlog.get_logger(__name__)
 
 
 class Engine:
@@ -57,7 +52,7 @@ class Engine:
         self._policies.prepared(None, [])
         self.store = Store(options, known=self._policies.knows, known_kinds=self._policies.known_kinds)
         self._budget_ms = budget_ms
-        self._watcher: asyncio.Task[None] | None = None
+        self._watcher = Periodic("policies", self._load_policies, _POLICIES_EVERY_S, at_once=False)
 
     @classmethod
     def from_settings(cls, settings: Settings) -> "Engine":
@@ -98,13 +93,11 @@ class Engine:
         self._exporter = Exporter(self.store)
         await self._load_policies()
         if background:
-            self._watcher = asyncio.create_task(self._watch_policies())
+            self._watcher.start()
 
     async def close(self) -> None:
         """Stop the background work and disconnect."""
-        if self._watcher is not None:
-            self._watcher.cancel()
-            await asyncio.gather(self._watcher, return_exceptions=True)
+        await self._watcher.stop()
         await self.store.close()
 
     async def apply(self, events: Sequence[AnyEvent], now_ms: int) -> list[Verdict]:
@@ -152,11 +145,3 @@ class Engine:
     async def _load_policies(self) -> None:
         stored = await self.store.connection.read("HGETALL", POLICIES)
         self._policies.load_all({name.decode(): text.decode() for name, text in stored.items()})
-
-    async def _watch_policies(self) -> None:
-        while True:
-            await asyncio.sleep(_POLICIES_EVERY_S)
-            try:
-                await self._load_policies()
-            except StoreUnavailable as error:
-                log.warning("policies_not_read", reason=error.detail)

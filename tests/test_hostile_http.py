@@ -10,7 +10,7 @@ from tests.hostile import hostile_schema, hostile_settings, judge
 schema = hostile_schema()
 
 
-@schema.parametrize()  # type: ignore[untyped-decorator]  the library declares none
+@schema.parametrize()  # type: ignore[untyped-decorator]  # the library declares none
 @hostile_settings
 def test_no_request_breaks_the_edge(case: Any) -> None:
     """Whatever the document lets a caller send is answered with 200 or with a problem that names a field."""

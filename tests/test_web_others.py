@@ -3,6 +3,7 @@
 import pytest
 from fastapi.testclient import TestClient
 from prometheus_client.parser import text_string_to_metric_families
+from structlog.testing import capture_logs
 
 from service.errors import StoreUnavailable
 from service.web.app import create_app
@@ -128,7 +129,8 @@ def test_odd_methods_are_counted_as_one(client: TestClient) -> None:
 def test_failures_are_counted(client: TestClient, engine: FakeEngine) -> None:
     """An unforeseen error is counted as a 500."""
     engine.failure = RuntimeError()
-    client.get("/v1/policies")
+    with capture_logs():
+        client.get("/v1/policies")
     assert samples(client, "waxwane_http_requests_total") == {("GET", "/v1/policies", "500"): 1}
 
 

@@ -6,6 +6,7 @@ from typing import Any
 import orjson
 import pytest
 from fastapi.testclient import TestClient
+from structlog.testing import capture_logs
 
 from service import errors
 from service.errors import Fault, WaxwaneError
@@ -148,16 +149,24 @@ def test_no_such_method(client: TestClient, method: str, path: str, allow: str) 
 def test_the_inside_is_not_told(client: TestClient, engine: FakeEngine) -> None:
     """An unforeseen error is a problem that tells nothing of the inside."""
     engine.failure = RuntimeError("password of the store")
-    response = client.get("/v1/feeds/joel")
+    with capture_logs() as logs:
+        response = client.get("/v1/feeds/joel")
     assert is_problem(response, 500)["detail"] == "the call failed for a reason that the log holds"
     assert "password" not in response.text
+    assert [(line["event"], line["route"]) for line in logs] == [
+        ("request failed", "/v1/feeds/{reader}"),
+        ("request", "/v1/feeds/{reader}"),
+    ]
+    assert "joel" not in str(logs)
 
 
 def test_browsers_guess_no_type(client: TestClient, engine: FakeEngine) -> None:
     """Every answer forbids guessing its type, an unforeseen error's too."""
     engine.failure = RuntimeError()
-    for path in ("/livez", "/nothing", "/v1/policies", "/v1/feeds/joel?k=0"):
-        assert client.get(path).headers.get_list("X-Content-Type-Options") == ["nosniff"]
+    paths = ("/livez", "/nothing", "/v1/policies", "/v1/feeds/joel?k=0")
+    with capture_logs():
+        found = [client.get(path).headers.get_list("X-Content-Type-Options") for path in paths]
+    assert found == [["nosniff"]] * 4
 
 
 def test_a_client_that_leaves_is_no_failure() -> None:

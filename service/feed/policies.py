@@ -60,7 +60,7 @@ class PolicyBook:
         try:
             policy = parse_policy(text)
         except PolicyError as error:
-            raise PolicyRefused(name or "of the file", str(error), error.line, error.field) from error
+            raise PolicyRefused(name or "of the file", error.reason, error.line, error.field, error.problems) from error
         if name is not None and policy.name != name:
             reason = f"name: {policy.name!r} is not allowed: the address says {name!r}"
             raise PolicyRefused(name, reason, field="name")

@@ -72,7 +72,7 @@ class Connection:
     async def read(self, *command: bytes | str | int) -> Any:  # noqa: ANN401  whatever the command answers
         """Run one plain command on the read pool."""
         async with translated():
-            return await self.reads.execute_command(*command)
+            return await self.reads.execute_command(*command)  # type: ignore[no-untyped-call]
 
     async def read_many(self, commands: Sequence[tuple[bytes | str | int, ...]]) -> list[Any]:
         """Run plain commands on the read pool in one round trip."""

@@ -93,7 +93,8 @@ class Driver:
         return far, noting
 
     def _note_refusals(self, entry: Entry, answers: list[Any], refused: dict[bytes, str]) -> None:
-        kind, first = entry.pieces[0].type, answers[0] if answers else None
+        kind = entry.pieces[0].type
+        first: Any = answers[0] if answers else None
         reason = None
         if kind == pieces.POST and first[0] != b"ok":
             reason = "author" if first[0] == b"author" else "hash"

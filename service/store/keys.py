@@ -29,7 +29,7 @@ bucket, and on a cluster a bucket is one slot. `b` is the bucket, 0 to 127.
 | `kinds` | hash | code of each kind | for good |
 | `meta` | hash | hash key, format and bank of the store | for good |
 | `policies` | hash | TOML of each pushed policy | for good |
-"""
+"""  # noqa: E501  the rows of a table
 
 from service.store.ids import bucket
 

@@ -1,6 +1,5 @@
 """One store: its connection, its lasting choices (hash key, bank), its kinds, and how events get in."""
 
-import asyncio
 import os
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
@@ -8,8 +7,9 @@ from dataclasses import dataclass
 import structlog
 
 from scoring.bank import Bank
-from service.errors import StoreUnavailable, WaxwaneError
+from service.errors import WaxwaneError
 from service.events.model import AnyEvent
+from service.periodic import Periodic
 from service.store import keys
 from service.store.calls import Call, StoreLimits, trim_board
 from service.store.connection import Connection
@@ -98,7 +98,7 @@ class Store:
         self.meta: dict[bytes, bytes] = {}
         self._known, self._known_kinds = known, known_kinds
         self._set_up()
-        self._sweeper: asyncio.Task[None] | None = None
+        self._sweeper = Periodic("sweep", self._sweep, _SWEEP_EVERY_S, at_once=True)
 
     def _set_up(self) -> None:
         self.driver = Driver(self.run, self.hasher, self.limits, self.board_slots)
@@ -131,13 +131,11 @@ class Store:
         await self._agree()
         await self.kinds.refresh()
         if sweep:
-            self._sweeper = asyncio.create_task(self._sweep_forever())
+            self._sweeper.start()
 
     async def close(self) -> None:
         """Stop sweeping and disconnect."""
-        if self._sweeper is not None:
-            self._sweeper.cancel()
-            await asyncio.gather(self._sweeper, return_exceptions=True)
+        await self._sweeper.stop()
         await self.connection.close()
 
     async def apply(self, events: Sequence[AnyEvent], now_ms: int) -> list[Verdict]:
@@ -188,15 +186,10 @@ class Store:
         self.hasher = IdHasher(self.meta[b"hash_key"])
         self._set_up()
 
-    async def _sweep_forever(self) -> None:
-        while True:
-            try:
-                server_time = await self.connection.read("TIME")
-                now_ms = int(server_time[0]) * 1000 + int(server_time[1]) // 1000
-                driven = await self.finish_open_entries(now_ms, _SWEEP_AGE_US)
-                if driven:
-                    log.info("finished_open_entries", entries=driven)
-                await self.trim_boards()
-            except StoreUnavailable as error:
-                log.warning("sweep_failed", reason=error.detail)
-            await asyncio.sleep(_SWEEP_EVERY_S)
+    async def _sweep(self) -> None:
+        server_time = await self.connection.read("TIME")
+        now_ms = int(server_time[0]) * 1000 + int(server_time[1]) // 1000
+        driven = await self.finish_open_entries(now_ms, _SWEEP_AGE_US)
+        if driven:
+            log.info("finished_open_entries", entries=driven)
+        await self.trim_boards()

@@ -1,0 +1,135 @@
+"""`waxwane import`: events from files into the store."""
+
+import contextlib
+import shlex
+import time
+from collections.abc import Callable, Iterator, Sequence
+from pathlib import Path
+from typing import Annotated, Final
+
+import orjson
+import typer
+
+from service.cli.import_progress import Progress, shown_progress
+from service.cli.opening import STORE_SETTINGS, Opened, opened
+from service.cli.options import Json, with_settings
+from service.cli.output import print_json, print_table
+from service.errors import InvalidField
+from service.importing.archives import STDIN, check_readable
+from service.importing.summary import SHOWN_REJECTED, Rejected, Stop, Summary, as_document, rate_per_s
+from service.settings import Settings
+from service.web import clock
+
+REJECTED: Final = 1
+_STOP_STATUS: Final = {"damaged": 1, "store": 2, "interrupted": 130}
+
+Files = Annotated[
+    list[str],
+    typer.Argument(
+        metavar="FILE…",
+        help="Files of one JSON event a line, plain or compressed with gzip, bzip2 or xz; - is standard input.",
+    ),
+]
+Rejects = Annotated[
+    Path | None,
+    typer.Option(metavar="FILE", help="Write every rejected line to this file, with its number and the reason."),
+]
+FromLine = Annotated[int, typer.Option(min=1, help="Begin at this line of the first file.")]
+
+
+def register(app: typer.Typer) -> None:
+    """Add the command."""
+    app.command("import")(with_settings(import_, STORE_SETTINGS))
+
+
+def import_(
+    overrides: dict[str, str | None],
+    *,
+    files: Files,
+    rejects: Rejects = None,
+    from_line: FromLine = 1,
+    json: Json = False,
+) -> None:
+    """Apply the events in files. Running it again does no harm: an event counts once.
+
+    Exit status 1 where lines were rejected or a file is damaged; 2 where it could not start, or where the store
+    stayed away: the message then says how to go on.
+    """
+    settings = Settings.load(overrides)
+    sizes = [check_readable(name) for name in files]
+    with _rejects_file(rejects, files) as on_rejected, opened(settings, background=True) as store:
+        summary = Summary(on_rejected)
+        started_s = time.perf_counter()
+        with shown_progress(sizes) as progress:
+            _import(store, files, from_line, summary, progress)
+        seconds = time.perf_counter() - started_s
+    if json:
+        print_json(as_document(summary, seconds))
+    else:
+        _show(summary, seconds, several=len(files) > 1)
+    if summary.stop is not None:
+        typer.echo(f"waxwane: {_advice(summary.stop, files)}", err=True)
+        raise typer.Exit(_STOP_STATUS[summary.stop.cause])
+    raise typer.Exit(REJECTED if summary.rejected else 0)
+
+
+def _import(store: Opened, files: Sequence[str], from_line: int, summary: Summary, progress: Progress) -> None:
+    from service.importing.batch import Importer  # noqa: PLC0415  it loads what most commands do without
+    from service.importing.run import import_files  # noqa: PLC0415  the same
+
+    importer = Importer(
+        apply=lambda events, now_ms: store.run(store.engine.apply(events, now_ms)),
+        now_ms=clock.now_ms,
+        pause=time.sleep,
+        summary=summary,
+    )
+    import_files(files, from_line, importer, lambda source: progress(source.name, source.consumed_bytes, summary))
+
+
+@contextlib.contextmanager
+def _rejects_file(path: Path | None, files: Sequence[str]) -> Iterator[Callable[[Rejected], None]]:
+    """Open the file that rejected lines are written to, one JSON object a line."""
+    if path is None:
+        yield lambda _: None
+        return
+    if path.resolve() in [Path(name).resolve() for name in files if name != STDIN]:
+        raise InvalidField("--rejects", str(path), "a file that is not one of those imported")
+    try:
+        file = path.open("wb")
+    except OSError as error:
+        raise InvalidField("--rejects", str(path), f"a file that can be written ({error.strerror})") from None
+    with file:
+        yield lambda rejected: _write(file.write, rejected)
+
+
+def _write(write: Callable[[bytes], int], rejected: Rejected) -> None:
+    document = {"file": rejected.file, "line": rejected.line, "reason": rejected.reason, "event": rejected.event}
+    write(orjson.dumps(document, option=orjson.OPT_APPEND_NEWLINE))
+
+
+def _show(summary: Summary, seconds: float, *, several: bool) -> None:
+    rate = rate_per_s(summary.read, seconds)
+    rows = [
+        ("read", f"{summary.read:,} events in {seconds:,.1f} s, {rate:,.0f} events/s"),
+        ("applied", f"{summary.applied:,}"),
+        ("duplicate", f"{summary.duplicate:,}"),
+        ("expired", f"{summary.expired:,}"),
+        ("rejected", f"{summary.rejected:,}"),
+    ]
+    _print_counts(rows)
+    if summary.first_rejected:
+        columns = ("file", "line", "reason") if several else ("line", "reason")
+        rows_of = [(one.file, f"{one.line:,}", one.reason) for one in summary.first_rejected]
+        print_table(columns, [row if several else row[1:] for row in rows_of])
+    more = summary.rejected - len(summary.first_rejected)
+    if more:
+        typer.echo(f"The first {SHOWN_REJECTED} rejected lines are shown, {more:,} more are not; --rejects FILE has all.")
+
+
+def _advice(stop: Stop, files: Sequence[str]) -> str:
+    """Say why an import ended early, and how to go on."""
+    if stop.cause == "damaged":
+        return f"{stop.file}: {stop.reason}; what could be read was applied"
+    rest = [name for place, name in enumerate(files) if stop.file in files and place >= files.index(stop.file)]
+    command = f"waxwane import --from-line {stop.line} {shlex.join(rest or [STDIN])}"
+    return f"{stop.file}: {stop.reason}; all before line {stop.line} was applied; go on with: {command}"
