@@ -65,6 +65,42 @@ def by_ties(edges: EdgeRows, circle: Circle) -> NDArray[np.bool_]:
     return chosen
 
 
+def by_hash(hashes: NDArray[np.uint64]) -> NDArray[np.intp]:
+    """Return the places of hashes in rising order, shape (n,).
+
+    Two passes of a radix sort put the upper 32 bits in order, in half the time of a comparing sort; the rare
+    different hashes that share them are noticed and sorted out.
+
+    >>> by_hash(np.array([3 << 40, 1 << 50, 1, 3 << 40], dtype=np.uint64))
+    array([2, 0, 3, 1])
+    """
+    upper = (hashes >> np.uint64(32)).astype(np.uint32)
+    order = np.argsort((upper & np.uint32(0xFFFF)).astype(np.uint16), kind="stable")
+    order = order[np.argsort((upper[order] >> np.uint32(16)).astype(np.uint16), kind="stable")]
+    ordered = hashes[order]
+    return order if np.all(ordered[:-1] <= ordered[1:]) else np.argsort(hashes, kind="stable")
+
+
+def places_in(ordered: NDArray[np.uint64], wanted: NDArray[np.uint64]) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    """Find hashes in an ordered list.
+
+    Args:
+        ordered: Rising, shape (n,).
+        wanted: Shape (m,).
+
+    Returns:
+        For those of `wanted` that are in the list: their places in it, and their places in `wanted`.
+
+    >>> places_in(np.array([2, 5, 9], dtype=np.uint64), np.array([9, 4, 2], dtype=np.uint64))
+    (array([2, 0]), array([0, 2]))
+    """
+    if not len(ordered):
+        return np.empty(0, np.intp), np.empty(0, np.intp)
+    place = np.minimum(np.searchsorted(ordered, wanted), len(ordered) - 1)
+    found = np.flatnonzero(ordered[place] == wanted)
+    return place[found], found
+
+
 def reduce_edges(edges: EdgeRows, circle: Circle, ranking: Ranking, t_ms: int) -> Candidates:
     """Reduce the circle's edges to candidates.
 
@@ -74,21 +110,18 @@ def reduce_edges(edges: EdgeRows, circle: Circle, ranking: Ranking, t_ms: int) -
         ranking: The compiled policy.
         t_ms: The time of the feed, Unix milliseconds.
     """
-    posts, place = np.unique(edges.post, return_inverse=True)
+    if not len(edges.post):
+        return Candidates(edges.post, np.empty(0), np.empty(0), np.empty(0))
+    order = by_hash(edges.post)
+    post = edges.post[order]
+    starts = np.flatnonzero(np.concatenate(([True], post[1:] != post[:-1])))
     terms = edge_terms(edges, circle, ranking, t_ms)
-    known = sum_by(place, terms.affinity * terms.weight * terms.freshness, len(posts))
-    share = sum_by(place, terms.weight * terms.crowd_freshness, len(posts))
-    tied = by_ties(edges, circle)
-    newest_ms = _newest(place[tied], edges.time_ms()[tied], len(posts))
+    counted_ms = np.where(by_ties(edges, circle), edges.time_ms(), -np.inf)
+    newest_ms = np.maximum.reduceat(counted_ms[order], starts)
     eligible = newest_ms > -np.inf
-    return Candidates(posts[eligible], known[eligible], share[eligible], newest_ms[eligible])
-
-
-def _newest(place: NDArray[np.intp], time_ms: NDArray[np.float64], count: int) -> NDArray[np.float64]:
-    """Return the greatest time for each place, -inf where there is none."""
-    newest = np.full(count, -np.inf)
-    np.maximum.at(newest, place, time_ms)
-    return newest
+    known = np.add.reduceat((terms.affinity * terms.weight * terms.freshness)[order], starts)
+    share = np.add.reduceat((terms.weight * terms.crowd_freshness)[order], starts)
+    return Candidates(post[starts][eligible], known[eligible], share[eligible], newest_ms[eligible])
 
 
 def sum_by(place: NDArray[np.intp], values: NDArray[np.float64], count: int) -> NDArray[np.float64]:

@@ -28,9 +28,44 @@ def tie_key(score: float) -> float:
     return math.ldexp(round(mantissa * 2.0**TIE_BITS), exponent - TIE_BITS)
 
 
-def by_bound(bounds: NDArray[np.float64]) -> NDArray[np.intp]:
-    """Return the places of candidates in falling order of their bounds, shape (n,)."""
-    return np.argsort(-bounds, kind="stable")
+class ByBound:
+    """Candidates in falling order of their bounds; only the front is sorted until more is asked for.
+
+    Args:
+        bounds: Upper bound of each candidate, shape (n,).
+        front: How many to sort at first.
+
+    >>> order = ByBound(np.array([1.0, 3.0, 2.0]), front=1)
+    >>> order.take(0, 1), order.take(1, 5), order.bound(2)
+    (array([1]), array([2, 0]), 1.0)
+    """
+
+    def __init__(self, bounds: NDArray[np.float64], front: int) -> None:
+        self._bounds = bounds
+        self._places = self._front(front)
+
+    def __len__(self) -> int:
+        return len(self._bounds)
+
+    def take(self, start: int, count: int) -> NDArray[np.intp]:
+        """Return the places of up to `count` candidates from the `start`-th on."""
+        self._reach(start + count)
+        return self._places[start : start + count]
+
+    def bound(self, at: int) -> float:
+        """Return the `at`-th greatest bound."""
+        self._reach(at + 1)
+        return float(self._bounds[self._places[at]])
+
+    def _reach(self, count: int) -> None:
+        if count > len(self._places) < len(self._bounds):
+            self._places = self._front(max(count, 4 * len(self._places)))
+
+    def _front(self, count: int) -> NDArray[np.intp]:
+        if count >= len(self._bounds):
+            return np.argsort(-self._bounds)
+        front = np.argpartition(-self._bounds, count)[:count]
+        return front[np.argsort(-self._bounds[front])]
 
 
 def settled(kth_score: float, next_bound: float) -> bool:

@@ -7,6 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring.ranking import Ranking
+from scoring.reduce import places_in
 from service.store import keys
 
 LISTED = 500
@@ -22,7 +23,7 @@ class CrowdBound:
     """Upper bounds of the weighted crowd sum.
 
     Attributes:
-        post: hashes of the listed posts, shape (n,), uint64, ascending.
+        post: hashes of the listed posts, shape (n,), uint64.
         bound: the bound of each, shape (n,).
         others: the bound of every post that is not listed.
 
@@ -33,12 +34,10 @@ class CrowdBound:
     others: float
 
     def of(self, posts: NDArray[np.uint64]) -> NDArray[np.float64]:
-        """Give the bound of each post, of the same shape."""
+        """Give the bound of each post, of the same shape; the posts are in rising order."""
         bounds = np.full(len(posts), self.others)
-        if len(self.post):
-            place = np.minimum(np.searchsorted(self.post, posts), len(self.post) - 1)
-            listed = self.post[place] == posts
-            bounds[listed] = self.bound[place[listed]]
+        place, listed = places_in(posts, self.post)
+        bounds[place] = self.bound[listed]
         return bounds
 
 
@@ -74,9 +73,8 @@ class BoardReader:
         posts = np.frombuffer(b"".join(flat[::2]), dtype="<u8")
         marks = np.array([float(mark) for mark in flat[1::2]])
         lowest = marks[-1] if len(marks) == LISTED else float(floor) if floor else -np.inf
-        order = np.argsort(posts)
-        bounds = self._values(marks, t_ms)
-        return CrowdBound(posts[order], bounds[order], float(self._values(np.array([lowest]), t_ms)[0]))
+        others = float(self._values(np.array([lowest]), t_ms)[0])
+        return CrowdBound(posts, self._values(marks, t_ms), others)
 
     def _values(self, marks: NDArray[np.float64], t_ms: int) -> NDArray[np.float64]:
         values: NDArray[np.float64] = self._scale * np.exp2(marks - t_ms / self._half_life_ms)

@@ -10,7 +10,7 @@ from scoring.arrange import keep_apart
 from scoring.edges import EdgeRows, erasures, live
 from scoring.noise import multipliers
 from scoring.ranking import Ranking
-from scoring.reduce import Candidates, reduce_edges
+from scoring.reduce import Candidates, places_in, reduce_edges
 from service.feed.deadline import Deadline
 from service.feed.pages import CursorBook, Session, new_session
 from service.feed.policies import PolicyBook, PreparedPolicy
@@ -235,9 +235,9 @@ def _seen_factors(view: View, candidates: Candidates) -> NDArray[np.float64]:
     seen = view.reader.seen_post
     if factor == 1.0 or not len(seen):
         return factors
-    place = np.minimum(np.searchsorted(seen, candidates.post), len(seen) - 1)
-    known = seen[place] == candidates.post
-    factors[known & (candidates.newest_ms <= view.reader.seen_ms[place])] = factor
+    place, found = places_in(candidates.post, seen)
+    unrenewed = candidates.newest_ms[place] <= view.reader.seen_ms[found]
+    factors[place[unrenewed]] = factor
     return factors
 
 

@@ -31,7 +31,7 @@ class ReaderState:
         friend_of: hashes of who declared the reader a friend.
         dealings: interactions with posts by known authors.
         dealt_post: the post of each dealing, shape (d,), uint64.
-        seen_post: posts seen, shape (s,), uint64, ascending.
+        seen_post: posts seen, shape (s,), uint64.
         seen_ms: when each was, shape (s,), Unix milliseconds.
 
     """
@@ -71,7 +71,7 @@ async def load_reader(connection: Connection, reader: bytes, *, profile: bool) -
         row = who = seen = b""
     ties, marks = np.frombuffer(out, dtype=EDGE), np.frombuffer(mark, dtype=EDGE)
     dealings, dealt_post = read_dealings(row, who)
-    seen_entries = np.sort(np.frombuffer(seen, dtype=EDGE), order="post")
+    seen_entries = np.frombuffer(seen, dtype=EDGE)
     return ReaderState(
         hash=reader,
         row=row,

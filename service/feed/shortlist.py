@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from scoring.crowd import raw_sums, running_sums
 from scoring.ranking import Ranking
 from scoring.reduce import Candidates, remainder
-from scoring.topk import by_bound, kth_greatest, order_key, settled
+from scoring.topk import ByBound, kth_greatest, order_key, settled
 from service.feed.board import CrowdBound
 from service.feed.deadline import Deadline
 from service.feed.visible import Gate
@@ -113,17 +113,18 @@ class Shortlister:
         stranger = self._ranking.policy.affinity.crowd
         most = remainder(bound.of(candidates.post), candidates.share) if stranger else np.zeros(len(candidates.post))
         bounds = (candidates.known + stranger * most) * factors * noise
-        order = by_bound(bounds)
-        shortlist, at, batch = Shortlist(), 0, max(FIRST_BATCH, need + 16)
-        while at < len(order) and not self._enough(shortlist, need, bounds[order[at]]):
+        batch = max(FIRST_BATCH, need + 16)
+        order = ByBound(bounds, 4 * batch)
+        shortlist, at = Shortlist(), 0
+        while at < len(order) and not self._enough(shortlist, need, order.bound(at)):
             if at and self._deadline.passed():
                 break
-            chosen = order[at : at + batch]
+            chosen = order.take(at, batch)
             shortlist.found += await self._look_up(candidates, factors, noise, chosen)
             at, batch = at + len(chosen), min(2 * batch, NEWEST_BATCH)
         shortlist.exhausted = at >= len(order)
         shortlist.found.sort(key=lambda one: order_key(one.order, one.record.posted_ms, one.record.id))
-        next_bound = 0.0 if shortlist.exhausted else float(bounds[order[at]])
+        next_bound = 0.0 if shortlist.exhausted else order.bound(at)
         shortlist.certain = (
             len(shortlist.found)
             if shortlist.exhausted
@@ -133,10 +134,10 @@ class Shortlister:
 
     async def newest(self, candidates: Candidates) -> Shortlist:
         """Find the candidates posted last: every one is looked up, those with the newest edges first."""
-        shortlist, order = Shortlist(), by_bound(candidates.newest_ms)
+        shortlist, order = Shortlist(), ByBound(candidates.newest_ms, NEWEST_BATCH)
         ones, at = np.ones(len(order)), 0
         while at < len(order) and not (at and self._deadline.passed()):
-            chosen = order[at : at + NEWEST_BATCH]
+            chosen = order.take(at, NEWEST_BATCH)
             shortlist.found += await self._look_up(candidates, ones, ones, chosen)
             at += len(chosen)
         shortlist.found.sort(key=lambda one: (-one.record.posted_ms, one.record.id.encode()))

@@ -307,9 +307,9 @@ def drop_relation(
     return Call(load("drop_relation"), script_keys, [*effect.head(), erased, until_ms])
 
 
-def raise_mark(slot: int, mark: bytes, post: bytes) -> Call:
-    """Raise a post on a board, never lower it."""
-    return Call(None, [], [b"ZADD", keys.board(slot), b"GT", mark, post])
+def raise_marks(slot: int, marks: Iterable[tuple[bytes, bytes]]) -> Call:
+    """Raise posts on a board, each given with its mark before it, never lower them."""
+    return Call(None, [], [b"ZADD", keys.board(slot), b"GT", *(part for pair in marks for part in pair)])
 
 
 def register_kinds(kinds: Sequence[str], limit: int) -> Call:

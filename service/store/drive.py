@@ -25,9 +25,10 @@ Run = Callable[[Sequence[Call]], Coroutine[Any, Any, list[Any]]]
 
 @dataclass(slots=True)
 class Step:
-    """What is to be done for one entry after its far effects: further calls, then the closing one."""
+    """What is to be done for one entry after its far effects: further calls and marks for the boards, then the end."""
 
     follow: list[Call] = field(default_factory=list)
+    marks: dict[int, list[tuple[bytes, bytes]]] = field(default_factory=dict)
     close: list[Call] = field(default_factory=list)
 
 
@@ -77,7 +78,8 @@ class Driver:
         for far, then in plans:
             steps.append(then(answers[at : at + len(far)]))
             at += len(far)
-        await self._run([call for step in steps for call in step.follow])
+        marks = [calls.raise_marks(slot, pairs) for slot, pairs in _merged(steps).items()]
+        await self._run([call for step in steps for call in step.follow] + marks)
         await self._run([call for step in steps for call in step.close])
 
     def _plan(
@@ -111,12 +113,10 @@ class Driver:
                 if answer[0] == b"":
                     refused.update({item.id_hash: "hash" for item in items})
 
-    def _marks(self, post: bytes, marks: Sequence[bytes]) -> list[Call]:
-        return [
-            calls.raise_mark(slot, mark, post)
-            for slot, mark in zip(self._board_slots, marks, strict=True)
-            if mark != b""
-        ]
+    def _note_marks(self, step: Step, post: bytes, marks: Sequence[bytes]) -> None:
+        for slot, mark in zip(self._board_slots, marks, strict=True):
+            if mark != b"":
+                step.marks.setdefault(slot, []).append((mark, post))
 
     def _edges(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
         groups = _by_bucket(_interactions(entry, self._hasher))
@@ -142,7 +142,7 @@ class Driver:
                 author = b"-" if answer[0] == b"" else b"" if answer[0] == NOBODY else answer[0]
                 found += [(item.actor, item.id_hash, author) for item in items]
                 if author != b"-":
-                    step.follow += self._marks(post, answer[1:])
+                    self._note_marks(step, post, answer[1:])
             found.sort(key=lambda one: one[0])
             people = [
                 (person, [(id_hash, author) for _, id_hash, author in group])
@@ -172,9 +172,10 @@ class Driver:
                 return Step(close=[calls.settle_event(write.author, entry.seq, piece.id_hash)])
             early = {answer[2][i : i + 8] for i in range(0, len(answer[2]), 8)}
             follow = [calls.learn_author(person, write.post, write.author) for person in sorted(early)]
-            follow += self._marks(write.post, answer[3:])
             follow.append(calls.put_creation(write.author, entry.seq, write.post + answer[1], now_ms, self._limits))
-            return Step(follow, [calls.settle_event(write.author, entry.seq)])
+            step = Step(follow, close=[calls.settle_event(write.author, entry.seq)])
+            self._note_marks(step, write.post, answer[3:])
+            return step
 
         return far, then
 
@@ -250,6 +251,15 @@ class Driver:
             for number, group in groups
         ]
         return far, [group for _, group in groups]
+
+
+def _merged(steps: Sequence[Step]) -> dict[int, list[tuple[bytes, bytes]]]:
+    """Put the marks of all steps together, by board."""
+    merged: dict[int, list[tuple[bytes, bytes]]] = {}
+    for step in steps:
+        for slot, pairs in step.marks.items():
+            merged.setdefault(slot, []).extend(pairs)
+    return merged
 
 
 @dataclass(frozen=True, slots=True)
