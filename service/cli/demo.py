@@ -15,7 +15,7 @@ from service.cli.output import print_json
 
 INTERRUPTED = 130
 _MIN_PEOPLE, _MAX_PEOPLE = 300, 5_000
-_DEFAULT_SEED = 7
+_DEFAULT_SEED = 3
 _WATCHED_PACE_S = 1.0
 
 
@@ -43,8 +43,8 @@ def demo(
 ) -> None:
     """Show what the service does: invented gardeners, one reader's feed with reasons, and how it changes.
 
-    It starts a service of its own with an embedded store, loads a week of events over HTTP, lets new
-    ones arrive, and says how to go on. Nothing else needs to run, and nothing stays behind.
+    It starts a service of its own with an embedded store, loads a week of events over HTTP, lets new ones arrive,
+    and says how to go on. Nothing else needs to run, and nothing stays behind unless --data is given.
     """
     started_s = time.perf_counter()
     from rich.console import Console  # noqa: PLC0415  other commands need none of these
@@ -55,7 +55,7 @@ def demo(
 
     pause_s = pace if pace is not None else _WATCHED_PACE_S if sys.stdout.isatty() and not json else 0.0
     screen = Screen(Console(quiet=json, highlight=False), lambda: time.sleep(pause_s))
-    wishes = Wishes(people=people, seed=seed, reader=reader, k=k, data=data, keep=keep)
+    wishes = Wishes(people=people, seed=seed, reader=reader, k=k, data=data and data.expanduser(), keep=keep)
     clocks = Clocks(clock.now_ms, lambda: time.perf_counter() - started_s)
     told: list[bool] = []
 

@@ -79,13 +79,15 @@ class Explanation:
 
 
 def _part(document: Mapping[str, Any], as_of_ms: int) -> Part:
+    """Read a part; the crowd's has no actor, no time of its own and no weight beyond its sum."""
     at_ms = parse_rfc3339(document["at"]) if "at" in document else as_of_ms
+    weight = document.get("weight", 1.0)
     return Part(
         document.get("actor", ""),
         document.get("kind", ""),
         at_ms,
         document["affinity"],
-        document.get("weight", 1.0),
+        weight,
         document["product"],
     )
 

@@ -143,4 +143,5 @@ def problem_in_words(body: bytes) -> str:
     if not isinstance(document, dict):
         return str(document)[:200]
     rejected = [f"{one.get('id')}: {one.get('reason')}" for one in document.get("rejected", [])[:1]]
-    return str(next(iter([*rejected, document.get("detail"), document.get("title")]), None) or "no reason was given")
+    told = [*rejected, document.get("detail"), document.get("title"), "no reason was given"]
+    return str(next(filter(None, told)))

@@ -7,6 +7,8 @@ from service.demo.answers import Explanation, Part
 from service.demo.community import Relation
 
 _MINUTE_MS = 60_000
+# Fewer are rounded away.
+_SEEN_POINTS = 0.05
 _ACTS = {
     "like": ("liked it", "likes"),
     "comment": ("commented", "comments"),
@@ -57,6 +59,7 @@ def sentence(found: list[Reason], width: int) -> str:
     'friend mina.plot17 shared it 2 h ago +5.2, more +1.4'
 
     """
+    found = [one for one in found if one.points >= _SEEN_POINTS] or found[:1]
     for shown in range(len(found), 0, -1):
         rest = sum(one.points for one in found[shown:])
         told = found[:shown] + ([Reason("more", rest)] if found[shown:] else [])

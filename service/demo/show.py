@@ -64,11 +64,11 @@ def play(wishes: Wishes, screen: Screen, clocks: Clocks, finish: Callable[[dict[
     """
     if wishes.data is not None:
         child.check_data(wishes.data)
+    week = chronicle.write(wishes.people, wishes.seed, clocks.now_ms())
+    reader = choose_reader(week, wishes.reader)
     screen.opening(wishes.people, wishes.seed)
     with child.running(wishes.data) as running:
         screen.started(running.client.url)
-        week = chronicle.write(wishes.people, wishes.seed, clocks.now_ms())
-        reader = choose_reader(week, wishes.reader)
         _load(running.client, week, screen)
         scene = Scene(running.client, week, reader, wishes.k, clocks.now_ms)
         document, feed = _first_feed(scene, screen, clocks)

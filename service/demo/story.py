@@ -76,8 +76,8 @@ def renew(scene: Scene, before: Feed, spent: set[str]) -> Beat | Skipped:
         title="A neighbour takes up an old post",
         happens=f"Your friend {friend} answers {old.post}, {age_in_words(before.as_of_ms - old.posted_ms)} old, "
         "with a photo.",
-        why=f"A fresh edge by a friend: affinity {fresh.affinity:.2f} x weight {fresh.weight:g} adds {fresh.product:.2f} "
-        f"to the {old.score:.2f} that were left. {_moved(before, after, old.post)}",
+        why=f"A fresh edge by a friend: affinity {fresh.affinity:.2f} x weight {fresh.weight:g} adds "
+        f"{fresh.product:.2f} to the {old.score:.2f} that were left. {_moved(before, after, old.post)}",
         events=[event],
         before=before,
         after=after,
@@ -131,7 +131,8 @@ def mute(scene: Scene, before: Feed, spent: set[str]) -> Beat | Skipped:
         name="mute",
         title="You mute someone",
         happens=f"You mute {author}.",
-        why=f"A mute counts from the next read on: {len(gone)} of the first {len(before.items)} posts are out at once.{others}",
+        why=f"A mute counts from the next read on: {len(gone)} of the first {len(before.items)} posts are out at "
+        f"once.{others}",
         events=[event],
         before=before,
         after=after,
@@ -169,8 +170,9 @@ def fade(scene: Scene, before: Feed, _spent: set[str]) -> Beat | Skipped:
         name="tomorrow",
         title="The same feed, tomorrow",
         happens="Nothing arrives; the feed is read with as_of 24 hours ahead.",
-        why=f"Two half-lives of 12 h leave a quarter of each edge: {left:.3f} of the best score. All edges fade alike, so "
-        "the order stays until something fresh arrives. What you learned of people fades too, by half in 30 days.",
+        why=f"Two half-lives of 12 h leave a quarter of each edge: {left:.3f} of the best score. All edges fade alike, "
+        "so little moves until something fresh arrives; what you learned of people fades by half in 30 days, which "
+        "may swap posts that stand close.",
         events=[],
         before=before,
         after=after,

@@ -79,7 +79,7 @@ class CursorBook:
         return urlsafe_b64encode(self._sign(body, reader) + body).rstrip(b"=").decode()
 
     def read(self, request: FeedRequest) -> Session:
-        """Read the cursor of a request.
+        """Read the cursor of a request. The time of its first page holds for all pages, whatever `as_of` says.
 
         Raises:
             CursorInvalid: it is not one of ours, or the request asks for something else than its feed.
@@ -99,8 +99,6 @@ class CursorBook:
         session = Session(key, offset, as_of_ms, _ORDERS[order], bool(explore), body[_BODY.size :].decode())
         if request.order != session.order or request.policy not in (None, session.policy):
             raise CursorInvalid(cursor, "order and policy must be those of its first page")
-        if request.as_of_ms not in (None, session.as_of_ms):
-            raise CursorInvalid(cursor, "as_of must be that of its first page")
         return session
 
     async def served(self, session: Session, cursor: str) -> list[bytes]:

@@ -24,7 +24,7 @@ FORMAT = "1"
 DAY_MS = 86_400_000
 BOARD_POSTS = 10_000
 _SWEEP_EVERY_S = 5.0
-_SWEEP_AGE_US = 5_000_000
+_SWEEP_AT_ONCE = 100
 
 log = structlog.get_logger(__name__)
 
@@ -98,6 +98,7 @@ class Store:
         self.meta: dict[bytes, bytes] = {}
         self._known, self._known_kinds = known, known_kinds
         self._set_up()
+        self._open_before: frozenset[tuple[int, bytes]] = frozenset()
         self._sweeper = Periodic("sweep", self._sweep, _SWEEP_EVERY_S, at_once=True)
 
     def _set_up(self) -> None:
@@ -142,28 +143,33 @@ class Store:
         """Apply events; see `Ingest.apply`."""
         return await self.ingest.apply(events, now_ms)
 
-    async def finish_open_entries(self, now_ms: int, older_than_us: int = 0) -> int:
-        """Drive outbox entries that were left open.
+    async def finish_open_entries(self, now_ms: int) -> int:
+        """Drive all outbox entries that are open now.
 
         Args:
             now_ms: now, Unix milliseconds.
-            older_than_us: leave alone entries younger than this, microseconds: others are at work on them.
 
         Returns:
             How many entries were driven.
 
+        Raises:
+            StoreUnavailable: the store does not answer.
+
         """
-        newest = now_ms * 1000 - older_than_us
+        return await self._drive_all(await self._open_entries(), now_ms)
+
+    async def _open_entries(self) -> list[tuple[int, bytes]]:
         commands: list[tuple[bytes | str | int, ...]] = [
-            (b"ZRANGEBYSCORE", keys.outbox(number), b"-inf", newest, b"LIMIT", 0, 100) for number in range(BUCKETS)
+            (b"ZRANGE", keys.outbox(number), 0, _SWEEP_AT_ONCE - 1) for number in range(BUCKETS)
         ]
-        driven = 0
-        for number, members in enumerate(await self.connection.read_many(commands)):
-            for member in members:
-                # Nothing is known of the low mark here: 0 prunes nothing and is always true.
-                await self.driver.drive([Entry.read(number, 0, member)], now_ms, {})
-                driven += 1
-        return driven
+        answers = await self.connection.read_many(commands)
+        return [(number, member) for number, members in enumerate(answers) for member in members]
+
+    async def _drive_all(self, entries: Sequence[tuple[int, bytes]], now_ms: int) -> int:
+        for number, member in entries:
+            # Nothing is known of the low mark here: 0 prunes nothing and is always true.
+            await self.driver.drive([Entry.read(number, 0, member)], now_ms, {})
+        return len(entries)
 
     async def trim_boards(self) -> None:
         """Keep the boards to their greatest posts."""
@@ -187,9 +193,11 @@ class Store:
         self._set_up()
 
     async def _sweep(self) -> None:
+        """Finish what was open at the sweep before and still is: no one is at work on it."""
+        entries = await self._open_entries()
+        left = [entry for entry in entries if entry in self._open_before]
+        self._open_before = frozenset(entries)
         server_time = await self.connection.read("TIME")
-        now_ms = int(server_time[0]) * 1000 + int(server_time[1]) // 1000
-        driven = await self.finish_open_entries(now_ms, _SWEEP_AGE_US)
-        if driven:
-            log.info("finished_open_entries", entries=driven)
+        if await self._drive_all(left, int(server_time[0]) * 1000):
+            log.info("finished_open_entries", entries=len(left))
         await self.trim_boards()

@@ -1,0 +1,196 @@
+"""Pages that follow a cursor."""
+
+import random
+from collections.abc import AsyncIterator
+from typing import Any
+
+import pytest
+
+from service.engine import Engine
+from service.errors import CursorExpired, CursorInvalid
+from service.feed.types import FeedAnswer, FeedRequest
+from service.settings import BUILT_IN_POLICY
+from service.store import keys
+from tests.engines import running, send
+
+NOW_MS = 1_777_885_200_000
+MINUTE_MS = 60_000
+POSTS = [f"bed-{number}" for number in range(25)]
+
+
+def event(identity: str, event_type: str, actor: str, at_ms: int = NOW_MS - MINUTE_MS, **more: Any) -> dict[str, Any]:
+    return {"id": identity, "type": event_type, "at": at_ms, "actor": actor, **more}
+
+
+def post(name: str, author: str, minutes_ago: int, **more: Any) -> dict[str, Any]:
+    return event(f"post-{name}", "post", author, NOW_MS - minutes_ago * MINUTE_MS, post=name, **more)
+
+
+@pytest.fixture
+async def engine(redis_db: str) -> AsyncIterator[Engine]:
+    """Joel follows mina, ada and lin, who published 25 posts between them."""
+    async with running(redis_db, BUILT_IN_POLICY.read_text()) as engine:
+        authors = ("mina", "ada", "lin")
+        events = [event(f"tie-{name}", "tie", "joel", target=name, relation="follow") for name in authors]
+        events += [post(name, authors[place % 3], 10 + 30 * place) for place, name in enumerate(POSTS)]
+        await send(engine, events, NOW_MS)
+        yield engine
+
+
+async def page(engine: Engine, cursor: str | None = None, **asked: Any) -> FeedAnswer:
+    request = FeedRequest("joel", **({"k": 10, "budget_ms": 60_000.0, "cursor": cursor} | asked))
+    return await engine.feed(request, NOW_MS)
+
+
+def posts_of(answer: FeedAnswer) -> list[str]:
+    return [item.post for item in answer.items]
+
+
+async def test_pages_hold_every_post_once_in_order(engine: Engine) -> None:
+    """Three pages of ten give the 25 posts, each once, newest first as they differ in age only; the last has no next."""
+    first = await page(engine)
+    second = await page(engine, first.next)
+    third = await page(engine, second.next)
+    assert posts_of(first) + posts_of(second) + posts_of(third) == POSTS
+    assert third.next is None
+    assert {answer.as_of_ms for answer in (first, second, third)} == {NOW_MS}
+    assert all(answer.complete for answer in (first, second, third))
+
+
+async def test_a_page_read_again_is_the_same(engine: Engine) -> None:
+    """A cursor read twice gives the same posts, although a better one has arrived in between."""
+    first = await page(engine)
+    second = await page(engine, first.next)
+    await send(engine, [post("late", "mina", 1, form="video")], NOW_MS)
+    again = await page(engine, first.next)
+    assert posts_of(again) == posts_of(second)
+    assert again.next == second.next
+
+
+async def test_what_arrives_in_between_repeats_and_skips_nothing(engine: Engine) -> None:
+    """A post that climbs above the first page is not served twice; one that falls is still served."""
+    first = await page(engine)
+    await send(
+        engine,
+        [
+            event("share", "interaction", "ada", NOW_MS, post=POSTS[20], kind="share"),
+            event("again", "interaction", "ada", NOW_MS, post=POSTS[0], kind="share"),
+            post("late", "mina", 1),
+        ],
+        NOW_MS,
+    )
+    second = await page(engine, first.next)
+    third = await page(engine, second.next)
+    assert posts_of(second)[0] == POSTS[20]
+    served = posts_of(first) + posts_of(second) + posts_of(third)
+    assert sorted(served) == sorted([*POSTS, "late"])
+
+
+async def test_what_may_no_longer_be_seen_leaves_later_pages(engine: Engine) -> None:
+    """A withdrawn post and the posts of someone muted meanwhile are not on the next page."""
+    first = await page(engine)
+    await send(
+        engine,
+        [event("w", "withdraw", "moderator", post=POSTS[12]), event("m", "tie", "joel", NOW_MS, target="ada", relation="mute")],
+        NOW_MS,
+    )
+    second = await page(engine, first.next)
+    left = [name for place, name in enumerate(POSTS) if place >= 10 and place % 3 != 1 and place != 12]
+    assert posts_of(second) == left[:10]
+
+
+async def test_a_page_served_before_drops_what_may_no_longer_be_seen(engine: Engine) -> None:
+    """A page that is read again leaves out a post withdrawn since."""
+    first = await page(engine)
+    second = await page(engine, first.next)
+    await send(engine, [event("w", "withdraw", "moderator", post=POSTS[12])], NOW_MS)
+    assert posts_of(await page(engine, first.next)) == [name for name in posts_of(second) if name != POSTS[12]]
+
+
+async def test_newest_first_has_pages_too(engine: Engine) -> None:
+    """Pages by posting time hold every post once, without scores."""
+    first = await page(engine, order="newest")
+    second = await page(engine, first.next, order="newest")
+    third = await page(engine, second.next, order="newest")
+    assert posts_of(first) + posts_of(second) + posts_of(third) == POSTS
+    assert [item.score for item in first.items] == [None] * 10
+
+
+@pytest.mark.parametrize("order", ["ranked", "newest"])
+async def test_random_interleavings_repeat_nothing(engine: Engine, order: Any) -> None:
+    """Whatever is written between pages: no post stands on two of them, and none that stays visible is left out."""
+    rng = random.Random(4)
+    for turn in range(15):
+        served: list[str] = []
+        cursor, pages = None, 0
+        while pages == 0 or cursor:
+            answer = await page(engine, cursor, k=rng.choice((3, 7)), order=order)
+            served += posts_of(answer)
+            cursor, pages = answer.next, pages + 1
+            name = rng.choice(POSTS)
+            kind = rng.choice(("like", "share", "comment"))
+            await send(engine, [event(f"{turn}-{pages}", "interaction", "lin", NOW_MS, post=name, kind=kind)], NOW_MS)
+        assert sorted(served) == sorted(POSTS)
+
+
+async def test_a_foreign_or_changed_cursor_is_refused(engine: Engine) -> None:
+    """A cursor works for its reader, order and policy only, and not when a character is changed."""
+    cursor = (await page(engine)).next
+    assert cursor is not None
+    changed = ("A" if cursor[30] != "A" else "B").join((cursor[:30], cursor[31:]))
+    for request in (
+        FeedRequest("mina", cursor=cursor),
+        FeedRequest("joel", cursor=cursor, order="newest"),
+        FeedRequest("joel", cursor=cursor, policy="other"),
+        FeedRequest("joel", cursor=changed),
+        FeedRequest("joel", cursor="not a cursor"),
+        FeedRequest("joel", cursor="é"),
+        FeedRequest("joel", cursor=""),
+    ):
+        with pytest.raises(CursorInvalid, match="cursor"):
+            await engine.feed(request, NOW_MS)
+
+
+async def test_pages_that_are_no_longer_kept_are_said_to_be(engine: Engine) -> None:
+    """Ten minutes after the last page its cursor is expired; until then its key has that lifetime."""
+    cursor = (await page(engine)).next
+    stored = await engine.store.connection.reads.keys("page:*")
+    assert len(stored) == 1
+    assert 590_000 < await engine.store.connection.reads.pttl(stored[0]) <= 600_000
+    await engine.store.connection.reads.delete(stored[0])
+    with pytest.raises(CursorExpired, match="no longer kept"):
+        await page(engine, cursor)
+    assert keys.key("page", stored[0][-8:]) == stored[0]
+
+
+async def test_authors_stand_apart_across_pages(redis_db: str) -> None:
+    """An author gap of one holds within a page and from one page to the next, as long as there are two authors."""
+    policy = BUILT_IN_POLICY.read_text().replace("author_gap = 0", "author_gap = 1")
+    async with running(redis_db, policy) as engine:
+        events = [event(f"tie-{name}", "tie", "joel", target=name, relation="follow") for name in ("mina", "ada")]
+        events += [post(f"m{number}", "mina", 1 + number) for number in range(5)]
+        events += [post(f"a{number}", "ada", 100 + number) for number in range(5)]
+        await send(engine, events, NOW_MS)
+        first = await page(engine, k=5)
+        second = await page(engine, first.next, k=5)
+        expected = [name for number in range(5) for name in (f"m{number}", f"a{number}")]
+        assert posts_of(first) + posts_of(second) == expected
+
+
+async def test_randomness_agrees_between_pages_and_can_be_switched_off(redis_db: str) -> None:
+    """With a temperature every page continues one drawn order; `explore` off gives the order of the scores."""
+    policy = BUILT_IN_POLICY.read_text().replace("temperature = 0.0", "temperature = 2.0")
+    async with running(redis_db, policy) as engine:
+        events = [event("tie", "tie", "joel", target="mina", relation="follow")]
+        events += [post(name, "mina", 1 + place) for place, name in enumerate(POSTS)]
+        await send(engine, events, NOW_MS)
+        orders = set()
+        for _ in range(5):
+            first = await page(engine)
+            second = await page(engine, first.next)
+            third = await page(engine, second.next)
+            served = posts_of(first) + posts_of(second) + posts_of(third)
+            assert sorted(served) == sorted(POSTS)
+            orders.add(tuple(served))
+        assert len(orders) == 5
+        assert posts_of(await page(engine, explore=False)) == POSTS[:10]
