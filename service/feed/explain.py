@@ -96,7 +96,7 @@ class Explainer:
         if not distinct:
             return {}
         hashes = [person.to_bytes(8, "little") for person in distinct]
-        names = await self._store.connection.read("MGET", *keys.keys("name", hashes))
+        names = await self._store.connection.mget(keys.keys("name", hashes))
         return {person: name.decode() if name else "" for person, name in zip(distinct, names, strict=True)}
 
     def _crowd(self, view: View, record: PostRecord, share: float, t_ms: int) -> CrowdPart:

@@ -37,7 +37,7 @@ class Exporter:
         """
         id_hash = self._store.hasher.hash(person)
         read = self._store.connection.read
-        values = await read("MGET", *(keys.key(name, id_hash) for name in _FIELDS))
+        values = await self._store.connection.mget([keys.key(name, id_hash) for name in _FIELDS])
         name, erased, row, who, seen, undo, posts = values
         known = name is not None and name.decode() == person
         return {
@@ -117,7 +117,7 @@ class Exporter:
         distinct = sorted(set(people) - {0})
         if not distinct:
             return {}
-        names = await self._store.connection.read("MGET", *keys.keys("name", _hashes(distinct)))
+        names = await self._store.connection.mget(keys.keys("name", _hashes(distinct)))
         return {person: name.decode() if name else None for person, name in zip(distinct, names, strict=True)}
 
 

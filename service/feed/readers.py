@@ -65,7 +65,7 @@ async def load_reader(connection: Connection, reader: bytes, *, profile: bool) -
         StoreUnavailable: the store does not answer.
 
     """
-    values = await connection.read("MGET", *(keys.key(name, reader) for name in _FIELDS))
+    values = await connection.mget([keys.key(name, reader) for name in _FIELDS])
     row, who, out, mark, seen = (value or b"" for value in values)
     if not profile:
         row = who = seen = b""
@@ -119,6 +119,6 @@ async def load_rows(connection: Connection, circle: Circle, deadline: Deadline) 
     for at in range(0, len(hashes), ROWS_AT_ONCE):
         if at and deadline.passed():
             break
-        rows += await connection.read("MGET", *keys.keys("row", hashes[at : at + ROWS_AT_ONCE]))
+        rows += await connection.mget(keys.keys("row", hashes[at : at + ROWS_AT_ONCE]))
     joined = join_rows(rows)
     return EdgeRows(joined.post, joined.stamp, order[joined.row]), len(rows) == len(hashes)

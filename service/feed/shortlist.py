@@ -55,7 +55,7 @@ async def fetch_records(connection: Connection, posts: Sequence[bytes]) -> list[
     """Fetch the records of posts, None where there is none."""
     if not posts:
         return []
-    values = await connection.read("MGET", *keys.keys("post", list(posts)))
+    values = await connection.mget(keys.keys("post", list(posts)))
     return [read_record(value) if value else None for value in values]
 
 
