@@ -7,9 +7,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring.bank import Bank, BankFit, fit
+from scoring.curves import HalfLife
 from scoring.policy import Policy
 
 Values = NDArray[np.float64]
+
+_CHECKED_AGES = 1 << 15
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,8 +56,10 @@ class Ranking:
             The smallest c found with crowd_freshness(age) <= c · 2^(-age / half_life) at ages 0 to horizon; each
             step between checked ages is allowed for.
         """
-        half_life = self.bank.half_lives_ms[slot]
-        ages = np.linspace(0.0, horizon_ms, 4097)
+        half_life, curve = self.bank.half_lives_ms[slot], self.policy.curve
+        if self.fit.exact and isinstance(curve, HalfLife) and curve.half_life_ms <= half_life:
+            return 1.0
+        ages = np.linspace(0.0, horizon_ms, _CHECKED_AGES)
         step = ages[1]
         with np.errstate(over="ignore"):
             ratio = np.max(self.crowd_freshness(ages) * np.exp2(ages / half_life))

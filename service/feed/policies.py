@@ -10,6 +10,9 @@ from service.errors import PolicyRefused, UnknownPolicy
 from service.feed.board import BoardReader
 from service.feed.types import PolicyInfo
 
+POST_LIVES = 13
+"""A post, and with it the oldest edge in its sums, leaves before this many times the retention."""
+
 
 @dataclass(frozen=True, slots=True)
 class LoadedPolicy:
@@ -108,7 +111,7 @@ class PolicyBook:
             if name not in self._loaded:
                 raise UnknownPolicy(name, list(self._loaded))
             ranking = compile_policy(self._loaded[name].policy, self._bank, kinds, self._horizon_ms)
-            prepared = PreparedPolicy(ranking, BoardReader(ranking, self._board_slots, self._horizon_ms))
+            prepared = PreparedPolicy(ranking, BoardReader(ranking, self._board_slots, POST_LIVES * self._horizon_ms))
             self._prepared[name] = prepared
         return prepared
 
