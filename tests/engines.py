@@ -25,9 +25,9 @@ def flush(url: str) -> None:
         client.flushall()
 
 
-def make_engine(url: str, *policies: str, retention_days: int = 30) -> Engine:
+def make_engine(url: str, *policies: str, retention_days: int = 30, timeout_s: float = 5.0) -> Engine:
     """Make an engine that is not started yet."""
-    return Engine(StoreOptions(url, DEFAULT_BANK, retention_days * DAY_MS, read_timeout_s=5.0), policies)
+    return Engine(StoreOptions(url, DEFAULT_BANK, retention_days * DAY_MS, timeout_s, timeout_s), policies)
 
 
 @asynccontextmanager

@@ -47,7 +47,7 @@ def posts_of(answer: FeedAnswer) -> list[str]:
 
 
 async def test_pages_hold_every_post_once_in_order(engine: Engine) -> None:
-    """Three pages of ten give the 25 posts, each once, newest first as they differ in age only; the last has no next."""
+    """Three pages of ten give the 25 posts, each once; as they differ in age only, the newest come first."""
     first = await page(engine)
     second = await page(engine, first.next)
     third = await page(engine, second.next)
@@ -91,7 +91,10 @@ async def test_what_may_no_longer_be_seen_leaves_later_pages(engine: Engine) -> 
     first = await page(engine)
     await send(
         engine,
-        [event("w", "withdraw", "moderator", post=POSTS[12]), event("m", "tie", "joel", NOW_MS, target="ada", relation="mute")],
+        [
+            event("w", "withdraw", "moderator", post=POSTS[12]),
+            event("m", "tie", "joel", NOW_MS, target="ada", relation="mute"),
+        ],
         NOW_MS,
     )
     second = await page(engine, first.next)

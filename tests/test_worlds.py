@@ -1,10 +1,10 @@
 """The whole service over HTTP against brute force, on worlds that Hypothesis chooses."""
 
 import os
-from collections.abc import Iterator
 from typing import Any
 from urllib.parse import quote
 
+import orjson
 import pytest
 from fastapi.testclient import TestClient
 from hypothesis import HealthCheck, given, settings
@@ -17,7 +17,7 @@ from service.web import clock
 from service.web.app import create_app
 from tests.engines import LATER_MS, flush, make_engine
 from tests.oracle import Oracle, assert_same_feed, assert_tie_order, look_up
-from tests.worlds import NOW_MS, World, schedules, worlds
+from tests.worlds import NOW_MS, World, random_world, schedules, worlds
 
 EXAMPLES = int(os.environ.get("TEST_WORLDS", "40"))
 CHOSEN = settings(
@@ -33,8 +33,8 @@ def _at_now(monkeypatch: pytest.MonkeyPatch) -> None:
 
 
 @pytest.fixture
-def url(redis_db: str) -> Iterator[str]:
-    yield redis_db
+def url(redis_db: str) -> str:
+    return redis_db
 
 
 def client_on(url: str, world: World) -> TestClient:
@@ -130,17 +130,15 @@ def test_curves_outside_the_bank_keep_to_the_certified_error(url: str, data: st.
             actual = dict(read_feed(client, reader))
             assert actual.keys() == expected.keys()
             for post, score in actual.items():
-                weight = sum(look_up(edge.kind, world.policy["weights"]) or 0.0 for edge in oracle.edges if edge.post == post)
+                weight = sum(
+                    look_up(edge.kind, world.policy["weights"]) or 0.0 for edge in oracle.edges if edge.post == post
+                )
                 allowed = policy.affinity.crowd * error * weight + 1e-9 * (expected[post] or 0.0) + 1e-12
                 assert abs((score or 0.0) - (expected[post] or 0.0)) <= allowed
 
 
 def test_every_way_of_sending_ends_in_the_same_feeds(url: str) -> None:
     """One event a call, one array, NDJSON and CloudEvents without ids of their own give equal feeds."""
-    import orjson
-
-    from tests.worlds import random_world
-
     world = random_world(11, people=5, posts=6, events=60)
     bodies: list[list[tuple[bytes, str]]] = [
         [(orjson.dumps(event), "application/json") for event in world.events],
