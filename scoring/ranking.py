@@ -61,7 +61,7 @@ class Ranking:
             return 1.0
         ages = np.linspace(0.0, horizon_ms, _CHECKED_AGES)
         step = ages[1]
-        with np.errstate(over="ignore"):
+        with np.errstate(over="ignore", invalid="ignore"):
             ratio = np.max(self.crowd_freshness(ages) * np.exp2(ages / half_life))
         return float(ratio * 2.0 ** (step / half_life)) if np.isfinite(ratio) else float("inf")
 

@@ -173,7 +173,7 @@ def test_keep_stays_up_until_told(tmp_path: Path) -> None:
     scratch.mkdir()
     with started(scratch, "--keep", "--people", "300", "--data", str(data)) as process:
         assert process.stdout is not None
-        shown = []
+        shown: list[str] = []
         while not shown or "waxwane --help" not in shown[-1]:
             shown.append(process.stdout.readline())
             assert shown[-1], "the output ended early"

@@ -1,6 +1,7 @@
 """What the demo looks like: 80 columns, with and without colour."""
 
 import io
+import json
 
 import pytest
 from rich.console import Console
@@ -9,6 +10,7 @@ from service.demo import ending, rows
 from service.demo.reasons import Reason
 from service.demo.screen import Screen
 from service.demo.story import Beat, Skipped
+from service.events.model import parse_event
 from tests.demo_samples import feed, item
 
 BEFORE = feed(item("mina.plot17-beans-1", 9.5), item("joel.plot3-kale-2", 4.0, 30), item("ivo.plot9-slugs-1", 3.0))
@@ -93,6 +95,17 @@ def test_how_to_go_on_fits_80_columns(*, keep: bool) -> None:
     assert ("waxwane demo --keep" in text) != keep
     for command in ("curl ", "waxwane import", "--help", "/openapi.json"):
         assert command in text
+
+
+@pytest.mark.parametrize("keep", [True, False])
+def test_events_to_copy_are_valid(*, keep: bool) -> None:
+    """What the lines to copy would send, once the shell has put in the time, are valid events."""
+    told = ending.paragraphs("http://127.0.0.1:45678", "mina.plot17", "joel.plot3-kale-2", 8, keep=keep, data=None)
+    text = "\n".join(line for _, lines in told for line in lines)
+    sent = text.replace("'$(date -u +%FT%TZ)'", "2026-05-04T09:00:00Z").split("-d '")[1].split("'")[0]
+    events = json.loads(sent)
+    parsed = [parse_event(event) for event in (events if isinstance(events, list) else [events])]
+    assert [event.type for event in parsed] == (["interaction"] if keep else ["tie", "post"])
 
 
 def test_skipped_beat_says_why() -> None:

@@ -14,7 +14,7 @@ from service.cli.options import Json
 from service.cli.output import print_json
 
 INTERRUPTED = 130
-_MIN_PEOPLE, _MAX_PEOPLE = 300, 5_000
+_MIN_PEOPLE, _MAX_PEOPLE = 300, 2_000
 _DEFAULT_SEED = 3
 _WATCHED_PACE_S = 1.0
 
@@ -27,7 +27,9 @@ def register(app: typer.Typer) -> None:
 def demo(
     *,
     reader: Annotated[str | None, typer.Option(help="Whose feed to show; not set: somebody with many ties.")] = None,
-    people: Annotated[int, typer.Option(min=_MIN_PEOPLE, max=_MAX_PEOPLE, help="How many gardeners.")] = 320,
+    people: Annotated[
+        int, typer.Option(min=_MIN_PEOPLE, max=_MAX_PEOPLE, help="How many gardeners; more take longer to load.")
+    ] = 320,
     seed: Annotated[int, typer.Option(min=0, help="Of all chance: the same seed invents the same week.")] = (
         _DEFAULT_SEED
     ),

@@ -12,8 +12,6 @@ Relation = Literal["follow", "friend", "mute", "block", "none"]
 HOUR_MS = 3_600_000
 DAY_MS = 24 * HOUR_MS
 WEEK_MS = 7 * DAY_MS
-MIN_PEOPLE = 300
-MAX_PEOPLE = 5_000
 
 # fmt: off
 NAMES = (
