@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from scoring.policy import AffinityRule
+from scoring.ranking import Ranking
 
 NONE, FOLLOW, FRIEND, MUTE, BLOCK = range(5)
 """Codes of relations."""
@@ -51,8 +51,7 @@ def circle(
     tie_person: NDArray[np.uint64],
     tie_relation: NDArray[np.uint8],
     dealings: Dealings,
-    rule: AffinityRule,
-    gains: NDArray[np.float64],
+    ranking: Ranking,
     t_ms: int,
 ) -> Circle:
     """Compute a reader's circle and affinities.
@@ -62,13 +61,13 @@ def circle(
         tie_person: Hashes of the people the reader declared a tie to, shape (n,), each once.
         tie_relation: The relation to each, shape (n,).
         dealings: The reader's interactions with posts by known authors.
-        rule: The policy's affinity.
-        gains: Gain by kind code, shape (codes,).
+        ranking: The compiled policy.
         t_ms: The time of the feed, Unix milliseconds.
 
     Returns:
         The circle; the reader is always in it.
     """
+    rule = ranking.policy.affinity
     everyone = np.concatenate([tie_person, dealings.author, np.array([reader], dtype=np.uint64)])
     person, place = np.unique(everyone, return_inverse=True)
     ties, acts = place[: len(tie_person)], place[len(tie_person) : -1]
@@ -76,7 +75,7 @@ def circle(
     relation[ties] = tie_relation
     base = np.array([rule.stranger, rule.follow, rule.friend, 0.0, 0.0])[relation]
     age_ms = np.maximum(t_ms - dealings.time_ms, 0.0)
-    gained = gains[dealings.code] * np.exp2(age_ms / -rule.half_life_ms)
+    gained = ranking.gains_of(dealings.code) * np.exp2(age_ms / -rule.half_life_ms)
     total = np.bincount(acts, gained, len(person)).astype(np.float64, copy=False)
     affinity = np.clip(base + total, 0.0, rule.ceiling)
     affinity[(relation == MUTE) | (relation == BLOCK) | (person == reader)] = 0.0

@@ -23,7 +23,7 @@ def raw_sums(post: NDArray[np.intp], stamp: NDArray[np.uint64], count: int, rank
     Returns:
         Σ weight · freshness for each post, shape (n,).
     """
-    value = ranking.weights[codes(stamp)] * ranking.crowd_freshness(t_ms - times_ms(stamp))
+    value = ranking.weights_of(codes(stamp)) * ranking.crowd_freshness(t_ms - times_ms(stamp))
     return sum_by(post, value, count)
 
 
@@ -51,5 +51,5 @@ def running_sums(
         Σ weight · Σ coefficient · sum · 2^(-age / half-life) for each post, shape (n,).
     """
     decay = np.exp2((as_of_ms - t_ms)[:, None] / np.array(ranking.bank.half_lives_ms))
-    value = ranking.weights[code] * ((sums * decay) @ ranking.fit.coefficients)
+    value = ranking.weights_of(code) * ((sums * decay) @ ranking.fit.coefficients)
     return sum_by(post, value, count)

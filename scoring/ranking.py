@@ -15,6 +15,10 @@ Values = NDArray[np.float64]
 _CHECKED_AGES = 1 << 15
 
 
+class UnknownCodeError(LookupError):
+    """An edge has a kind code that the policy was not compiled for: the kinds have grown since."""
+
+
 @dataclass(frozen=True, slots=True)
 class Ranking:
     """A compiled policy.
@@ -44,6 +48,22 @@ class Ranking:
         half_lives = np.array(self.bank.half_lives_ms)
         followed: Values = np.exp2(np.maximum(age_ms, 0.0)[..., None] / -half_lives) @ self.fit.coefficients
         return followed
+
+    def weights_of(self, codes: NDArray[np.intp]) -> Values:
+        """Return the weight of each kind code, of the same shape.
+
+        Raises:
+            UnknownCodeError: A code is newer than the compiled policy.
+        """
+        return _looked_up(self.weights, codes)
+
+    def gains_of(self, codes: NDArray[np.intp]) -> Values:
+        """Return the gain of each kind code, of the same shape.
+
+        Raises:
+            UnknownCodeError: A code is newer than the compiled policy.
+        """
+        return _looked_up(self.gains, codes)
 
     def ceiling_over(self, slot: int, horizon_ms: float) -> float:
         """Bound the crowd's freshness by a multiple of one half-life of the bank.
@@ -80,3 +100,10 @@ def compile_policy(policy: Policy, bank: Bank, kinds: Sequence[str], horizon_ms:
     """
     curve_fit = fit(policy.curve, bank, horizon_ms, signed=True)
     return Ranking(policy, bank, curve_fit, policy.weights_for(kinds), policy.gains_for(kinds))
+
+
+def _looked_up(table: Values, codes: NDArray[np.intp]) -> Values:
+    if len(codes) and codes.max() >= len(table):
+        raise UnknownCodeError(int(codes.max()))
+    found: Values = table[codes]
+    return found

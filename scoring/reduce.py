@@ -56,7 +56,7 @@ def edge_terms(edges: EdgeRows, circle: Circle, ranking: Ranking, t_ms: int) -> 
     age_ms = t_ms - edges.time_ms()
     freshness = ranking.freshness(age_ms)
     crowd_freshness = freshness if ranking.fit.exact else ranking.crowd_freshness(age_ms)
-    return EdgeTerms(circle.affinity[edges.row], ranking.weights[edges.code()], freshness, crowd_freshness)
+    return EdgeTerms(circle.affinity[edges.row], ranking.weights_of(edges.code()), freshness, crowd_freshness)
 
 
 def by_ties(edges: EdgeRows, circle: Circle) -> NDArray[np.bool_]:

@@ -45,6 +45,9 @@ class Explainer:
             StoreUnavailable: the store does not answer.
 
         """
+        return await self._ranker.with_all_kinds(lambda: self._explain(request, now_ms))
+
+    async def _explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         t_ms = now_ms if request.as_of_ms is None else max(request.as_of_ms, now_ms)
         policy = request.policy or self._policies.default
         deadline = Deadline(_ALL_THE_TIME_MS, time.perf_counter())

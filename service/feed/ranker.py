@@ -1,6 +1,8 @@
 """A feed read: the reader's state, the circle's rows, the reduction, the look-ups, the page."""
 
+from collections.abc import Awaitable, Callable
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -9,7 +11,7 @@ from scoring.affinity import Circle, Dealings, circle
 from scoring.arrange import keep_apart
 from scoring.edges import EdgeRows, erasures, live
 from scoring.noise import multipliers
-from scoring.ranking import Ranking
+from scoring.ranking import Ranking, UnknownCodeError
 from scoring.reduce import Candidates, places_in, reduce_edges
 from service.feed.deadline import Deadline
 from service.feed.pages import CursorBook, Session, new_session
@@ -20,7 +22,7 @@ from service.feed.types import FeedAnswer, FeedItem, FeedRequest
 from service.feed.visible import Gate
 from service.store.store import Store
 
-NO_DEALINGS = Dealings(np.empty(0, np.uint64), np.empty(0, np.intp), np.empty(0))
+Answer = TypeVar("Answer")
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,6 +77,19 @@ class Ranker:
         """
         deadline = Deadline(request.budget_ms or self._budget_ms, arrived_s)
         session, served = await self._session(request, now_ms)
+        return await self.with_all_kinds(lambda: self._page(request, session, served, deadline))
+
+    async def with_all_kinds(self, read: Callable[[], Awaitable[Answer]]) -> Answer:
+        """Read, and once more where another worker has registered a kind meanwhile."""
+        try:
+            return await read()
+        except UnknownCodeError:
+            await self._store.kinds.refresh()
+            return await read()
+
+    async def _page(
+        self, request: FeedRequest, session: Session, served: list[bytes], deadline: Deadline
+    ) -> FeedAnswer:
         profile = session.order == "ranked"
         view = await self.view(request.reader, session.policy, session.as_of_ms, deadline, profile=profile)
         candidates = reduce_edges(view.edges, view.circle, view.ranking, session.as_of_ms)
@@ -117,14 +132,10 @@ class Ranker:
         state = await load_reader(connection, self._store.hasher.hash(reader), profile=profile)
         deadline.stage("reader")
         prepared = self._policies.prepared(policy, self._store.kinds.names)
-        if len(state.dealings.code) and state.dealings.code.max() >= len(prepared.ranking.weights):
-            prepared = await self._prepared_anew(policy)
         known = _circle(state, state.dealings, prepared.ranking, t_ms)
         rows, whole = await load_rows(connection, known, deadline)
         deadline.stage("rows")
         edges = live(rows)
-        if len(edges.stamp) and edges.code().max() >= len(prepared.ranking.weights):
-            prepared = await self._prepared_anew(policy)
         erased = {int(known.person[row]): until_ms for row, until_ms in erasures(rows).items()}
         erased.pop(hash_number(state.hash), None)
         if erased and np.isin(state.dealings.author, list(erased)).any():
@@ -188,11 +199,6 @@ class Ranker:
             await self._cursors.keep(session, served[: session.offset] + page)
         return self._cursors.write(session, request.reader, end)
 
-    async def _prepared_anew(self, policy: str) -> PreparedPolicy:
-        """Prepare a policy for kinds that another worker has registered."""
-        await self._store.kinds.refresh()
-        return self._policies.prepared(policy, self._store.kinds.names)
-
     async def _without_erased(self, state: ReaderState, erased: dict[int, int]) -> Dealings:
         """Leave out dealings with people since erased: those up to then, and those with posts that went."""
         dealings = state.dealings
@@ -208,11 +214,10 @@ class Ranker:
 
 def _circle(state: ReaderState, dealings: Dealings, ranking: Ranking, t_ms: int, keep: Circle | None = None) -> Circle:
     """Compute the circle; with `keep`, on the same people as an earlier one, so that rows keep their places."""
-    rule, reader = ranking.policy.affinity, hash_number(state.hash)
-    known = circle(reader, state.tie_person, state.tie_relation, dealings, rule, ranking.gains, t_ms)
+    known = circle(hash_number(state.hash), state.tie_person, state.tie_relation, dealings, ranking, t_ms)
     if keep is None:
         return known
-    affinity = np.full(len(keep.person), rule.crowd)
+    affinity = np.full(len(keep.person), ranking.policy.affinity.crowd)
     affinity[np.searchsorted(keep.person, known.person)] = known.affinity
     return Circle(keep.person, keep.relation, affinity)
 
