@@ -1,5 +1,6 @@
 """Edges as arrays: 16 bytes each, the post's hash and a stamp of time and kind code."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -50,17 +51,17 @@ class EdgeRows:
         return EdgeRows(self.post[chosen], self.stamp[chosen], self.row[chosen])
 
 
-def join_rows(rows: list[bytes | None]) -> EdgeRows:
+def join_rows(rows: Sequence[bytes]) -> EdgeRows:
     """Decode rows as they are stored.
 
     Args:
-        rows: One packed row for each person; None where there is none.
+        rows: One packed row for each person.
 
     Returns:
         All entries of all rows, retracted ones and markers among them.
     """
-    packed = np.frombuffer(b"".join([row for row in rows if row]), dtype=EDGE)
-    counts = np.array([len(row) // EDGE.itemsize if row else 0 for row in rows], dtype=np.intp)
+    packed = np.frombuffer(b"".join(rows), dtype=EDGE)
+    counts = np.array([len(row) // EDGE.itemsize for row in rows], dtype=np.intp)
     return EdgeRows(packed["post"], packed["stamp"], np.repeat(np.arange(len(rows)), counts))
 
 

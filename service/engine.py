@@ -6,6 +6,7 @@ from typing import Any
 
 from scoring.bank import DEFAULT_BANK, Bank
 from service.events.model import AnyEvent
+from service.feed.cache import WorkerCache
 from service.feed.explain import Explainer
 from service.feed.export import Exporter
 from service.feed.policies import PolicyBook
@@ -20,6 +21,9 @@ from service.store.verdict import Verdict
 
 _POLICIES_EVERY_S = 1.0
 
+BYTES_A_POST = 2048
+"""About what a remembered post takes, bytes."""
+
 
 class Engine:
     """Takes events and ranks feeds.
@@ -29,6 +33,7 @@ class Engine:
         policies: texts of policy files; the first is the default.
         budget_ms: time that a ranking may take where a request says nothing, milliseconds.
         default_policy: name of the default policy where it is not the first.
+        cache_bytes: most memory for rows remembered between reads, and about as much for posts, bytes.
 
     Raises:
         PolicyRefused: a policy has an error.
@@ -42,6 +47,7 @@ class Engine:
         *,
         budget_ms: float = 50.0,
         default_policy: str | None = None,
+        cache_bytes: int = 64 << 20,
     ) -> None:
         slots = board_slots(len(options.bank.half_lives_ms))
         self._policies = PolicyBook(options.bank, slots, options.retention_ms)
@@ -52,6 +58,7 @@ class Engine:
         self._policies.prepared(None, [])
         self.store = Store(options, known=self._policies.knows, known_kinds=self._policies.known_kinds)
         self._budget_ms = budget_ms
+        self._cache = WorkerCache(row_bytes=cache_bytes, posts=cache_bytes // BYTES_A_POST)
         self._watcher = Periodic("policies", self._load_policies, _POLICIES_EVERY_S, at_once=False)
 
     @classmethod
@@ -75,7 +82,13 @@ class Engine:
             pool_size=settings.pool_size,
         )
         texts = [path.read_text() for path in settings.policies]
-        return cls(options, texts, budget_ms=settings.budget_ms, default_policy=settings.default_policy)
+        return cls(
+            options,
+            texts,
+            budget_ms=settings.budget_ms,
+            default_policy=settings.default_policy,
+            cache_bytes=settings.cache_mb << 20,
+        )
 
     async def start(self, *, background: bool = True) -> None:
         """Connect, and start what runs in the background.
@@ -88,7 +101,7 @@ class Engine:
 
         """
         await self.store.start(sweep=background)
-        self._ranker = Ranker(self.store, self._policies, self._budget_ms)
+        self._ranker = Ranker(self.store, self._policies, self._cache, self._budget_ms)
         self._explainer = Explainer(self.store, self._policies, self._ranker)
         self._exporter = Exporter(self.store)
         await self._load_policies()

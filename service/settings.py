@@ -109,6 +109,9 @@ class Settings(BaseSettings):
     pool_size: Annotated[int, Field(ge=1, le=10_000)] = _setting(
         64, "connections to the store for each worker", "an integer from 1 to 10000"
     )
+    cache_mb: Annotated[int, Field(ge=0, le=65_536)] = _setting(
+        64, "memory for rows that each worker remembers between reads, and again for posts", "megabytes, 0 to 65536"
+    )
     max_body_bytes: Annotated[int, Field(ge=1_024, le=1 << 30)] = _setting(
         8 << 20, "largest request body", "an integer from 1024 to 1073741824"
     )

@@ -25,9 +25,12 @@ def flush(url: str) -> None:
         client.flushall()
 
 
-def make_engine(url: str, *policies: str, retention_days: int = 30, timeout_s: float = 5.0) -> Engine:
+def make_engine(
+    url: str, *policies: str, retention_days: int = 30, timeout_s: float = 5.0, cache_bytes: int = 64 << 20
+) -> Engine:
     """Make an engine that is not started yet."""
-    return Engine(StoreOptions(url, DEFAULT_BANK, retention_days * DAY_MS, timeout_s, timeout_s), policies)
+    options = StoreOptions(url, DEFAULT_BANK, retention_days * DAY_MS, timeout_s, timeout_s)
+    return Engine(options, policies, cache_bytes=cache_bytes)
 
 
 @asynccontextmanager

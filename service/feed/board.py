@@ -19,13 +19,29 @@ Command = tuple[bytes | str | int, ...]
 
 
 @dataclass(frozen=True, slots=True)
+class BoardState:
+    """A board as it was read.
+
+    Attributes:
+        post: hashes of the listed posts, shape (n,), uint64.
+        mark: log2 of the decayed count of each plus time over half-life, shape (n,).
+        lowest: the mark that no unlisted post is above, -inf where all are listed.
+
+    """
+
+    post: NDArray[np.uint64]
+    mark: NDArray[np.float64]
+    lowest: float
+
+
+@dataclass(frozen=True, slots=True)
 class CrowdBound:
     """Upper bounds of the weighted crowd sum.
 
     Attributes:
-        post: hashes of the listed posts, shape (n,), uint64.
-        bound: the bound of each, shape (n,).
-        others: the bound of every post that is not listed.
+        post: hashes of posts with a bound of their own, shape (n,), uint64.
+        bound: the bound of each, shape (n,); inf where nothing is known.
+        others: the bound of every other post.
 
     """
 
@@ -55,26 +71,38 @@ class BoardReader:
         ceilings = [ranking.ceiling_over(slot, horizon_ms) for slot in slots]
         close = [place for place, ceiling in enumerate(ceilings) if ceiling <= _CLOSE_ENOUGH]
         chosen = close[0] if close else int(np.argmin(ceilings))
-        self._slot = slots[chosen]
-        self._half_life_ms = ranking.bank.half_lives_ms[self._slot]
+        self.slot = slots[chosen]
+        self._half_life_ms = ranking.bank.half_lives_ms[self.slot]
         heaviest = float(ranking.weights.max(initial=0.0))
         self._scale = ceilings[chosen] * heaviest
 
     def commands(self) -> list[Command]:
         """Give the commands whose answers `read` takes."""
         return [
-            (b"ZREVRANGE", keys.board(self._slot), 0, LISTED - 1, b"WITHSCORES"),
-            (b"GET", keys.floor(self._slot)),
+            (b"ZREVRANGE", keys.board(self.slot), 0, LISTED - 1, b"WITHSCORES"),
+            (b"GET", keys.floor(self.slot)),
         ]
 
-    def read(self, answers: list[Any], t_ms: int) -> CrowdBound:
-        """Turn the answers into bounds at a time, Unix milliseconds."""
+    def read(self, answers: list[Any]) -> BoardState:
+        """Read the answers."""
         flat, floor = answers
-        posts = np.frombuffer(b"".join(flat[::2]), dtype="<u8")
         marks = np.array([float(mark) for mark in flat[1::2]])
-        lowest = marks[-1] if len(marks) == LISTED else float(floor) if floor else -np.inf
-        others = float(self._values(np.array([lowest]), t_ms)[0])
-        return CrowdBound(posts, self._values(marks, t_ms), others)
+        lowest = float(marks[-1]) if len(marks) == LISTED else float(floor) if floor else -np.inf
+        return BoardState(np.frombuffer(b"".join(flat[::2]), dtype="<u8"), marks, lowest)
+
+    def bound(self, state: BoardState, changed: set[bytes], t_ms: int) -> CrowdBound:
+        """Turn a board into bounds.
+
+        Args:
+            state: the board as it was read.
+            changed: posts that have changed since: nothing is known of them.
+            t_ms: the time of the feed, Unix milliseconds.
+
+        """
+        unknown = np.frombuffer(b"".join(changed), dtype="<u8")
+        bounds = np.concatenate((self._values(state.mark, t_ms), np.full(len(unknown), np.inf)))
+        others = float(self._values(np.array([state.lowest]), t_ms)[0])
+        return CrowdBound(np.concatenate((state.post, unknown)), bounds, others)
 
     def _values(self, marks: NDArray[np.float64], t_ms: int) -> NDArray[np.float64]:
         values: NDArray[np.float64] = self._scale * np.exp2(marks - t_ms / self._half_life_ms)

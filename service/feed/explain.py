@@ -11,7 +11,7 @@ from service.feed.deadline import Deadline
 from service.feed.policies import PolicyBook
 from service.feed.ranker import Ranker, View
 from service.feed.readers import hash_number
-from service.feed.shortlist import crowd_sums, fetch_records
+from service.feed.shortlist import crowd_sums
 from service.feed.types import CrowdPart, ExplainRequest, Explanation, Factor, TiePart
 from service.feed.visible import Gate
 from service.store import keys
@@ -53,7 +53,7 @@ class Explainer:
         deadline = Deadline(_ALL_THE_TIME_MS, time.perf_counter())
         view = await self._ranker.view(request.reader, policy, t_ms, deadline, profile=True)
         post = self._store.hasher.hash(request.post)
-        record = (await fetch_records(self._store.connection, [post]))[0]
+        record = (await self._ranker.reads.posts([post]))[0]
         if record is None or record.id != request.post or not Gate(view.reader).lets_through(record):
             raise NotFound("this reader may not see this post, or there is no such post")
         edges = view.edges.select(view.edges.post == np.uint64(hash_number(post)))

@@ -5,10 +5,10 @@ from typing import Any
 import numpy as np
 
 from scoring.edges import EDGE, MARKER, RETRACTED, codes, times_ms
-from service.feed.shortlist import fetch_records
 from service.store import keys
 from service.store.drive import RELATIONS
 from service.store.pieces import unstamp
+from service.store.records import PostRecord, read_record
 from service.store.store import Store
 from service.times import format_ms
 
@@ -57,7 +57,7 @@ class Exporter:
         real = codes(edges["stamp"]) != MARKER
         authors = np.frombuffer(who, dtype="<u8")[: len(edges)][real].tolist()
         edges = edges[real]
-        records = await fetch_records(self._store.connection, _hashes(edges["post"].tolist()))
+        records = await self._records(_hashes(edges["post"].tolist()))
         names = await self._names(authors)
         retracted = (edges["stamp"] & np.uint64(RETRACTED)) != 0
         columns = zip(
@@ -81,7 +81,7 @@ class Exporter:
 
     async def _post_ids(self, posts: bytes) -> list[dict[str, Any]]:
         entries = np.frombuffer(posts, dtype=EDGE)
-        records = await fetch_records(self._store.connection, _hashes(entries["post"].tolist()))
+        records = await self._records(_hashes(entries["post"].tolist()))
         return [
             {
                 "post": record.id,
@@ -97,7 +97,7 @@ class Exporter:
 
     async def _seen(self, seen: bytes) -> list[dict[str, Any]]:
         entries = np.frombuffer(seen, dtype=EDGE)
-        records = await fetch_records(self._store.connection, _hashes(entries["post"].tolist()))
+        records = await self._records(_hashes(entries["post"].tolist()))
         times = times_ms(entries["stamp"]).tolist()
         return [
             {"post": record.id if record else None, "at": format_ms(int(at_ms))}
@@ -112,6 +112,12 @@ class Exporter:
             at_ms, code = unstamp(value[:8])
             relations.append({role: names.get(person), "relation": RELATIONS[code], "at": format_ms(at_ms)})
         return relations
+
+    async def _records(self, posts: list[bytes]) -> list[PostRecord | None]:
+        if not posts:
+            return []
+        values = await self._store.connection.mget(keys.keys("post", posts))
+        return [read_record(value) if value else None for value in values]
 
     async def _names(self, people: list[int]) -> dict[int, str | None]:
         distinct = sorted(set(people) - {0})

@@ -13,11 +13,13 @@ from scoring.edges import EdgeRows, erasures, live
 from scoring.noise import multipliers
 from scoring.ranking import Ranking, UnknownCodeError
 from scoring.reduce import Candidates, places_in, reduce_edges
+from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
 from service.feed.pages import CursorBook, Session, new_session
 from service.feed.policies import PolicyBook, PreparedPolicy
 from service.feed.readers import ReaderState, hash_number, load_reader, load_rows
-from service.feed.shortlist import Found, Shortlist, Shortlister, fetch_records
+from service.feed.reads import Reads
+from service.feed.shortlist import Found, Shortlist, Shortlister
 from service.feed.types import FeedAnswer, FeedItem, FeedRequest
 from service.feed.visible import Gate
 from service.store.store import Store
@@ -50,14 +52,16 @@ class Ranker:
     Args:
         store: the state behind all feeds; started.
         policies: the loaded policies.
+        cache: what this worker remembers between reads.
         budget_ms: time that a ranking may take where the request says nothing, milliseconds.
 
     """
 
-    def __init__(self, store: Store, policies: PolicyBook, budget_ms: float) -> None:
+    def __init__(self, store: Store, policies: PolicyBook, cache: WorkerCache, budget_ms: float) -> None:
         self._store = store
         self._policies = policies
         self._budget_ms = budget_ms
+        self.reads = Reads(store.connection, cache)
         self._cursors = CursorBook(store.connection, store.meta[b"hash_key"])
 
     async def feed(self, request: FeedRequest, now_ms: int, arrived_s: float) -> FeedAnswer:
@@ -128,12 +132,11 @@ class Ranker:
             StoreUnavailable: the store does not answer.
 
         """
-        connection = self._store.connection
-        state = await load_reader(connection, self._store.hasher.hash(reader), profile=profile)
+        state = await load_reader(self.reads, self._store.hasher.hash(reader), profile=profile)
         deadline.stage("reader")
         prepared = self._policies.prepared(policy, self._store.kinds.names)
         known = _circle(state, state.dealings, prepared.ranking, t_ms)
-        rows, whole = await load_rows(connection, known, deadline)
+        rows, whole = await load_rows(self.reads, known, deadline)
         deadline.stage("rows")
         edges = live(rows)
         erased = {int(known.person[row]): until_ms for row, until_ms in erasures(rows).items()}
@@ -160,7 +163,7 @@ class Ranker:
         deadline: Deadline,
     ) -> tuple[list[Found], bool, bool]:
         """Choose a page's posts; say whether they are certain, and whether more may follow."""
-        shortlister = Shortlister(self._store.connection, Gate(view.reader), view.ranking, session.as_of_ms, deadline)
+        shortlister = Shortlister(self.reads, Gate(view.reader), view.ranking, session.as_of_ms, deadline)
         if session.order == "newest":
             shortlist = await shortlister.newest(candidates)
             more = len(shortlist.found) > request.k or not shortlist.exhausted
@@ -169,7 +172,7 @@ class Ranker:
         temperature = view.ranking.policy.temperature if session.explore else 0.0
         noise = multipliers(session.seed, candidates.post, temperature)
         board = view.prepared.board
-        bound = board.read(await self._store.connection.read_many(board.commands()), session.as_of_ms)
+        bound = board.bound(*await self.reads.board(board, session.as_of_ms), session.as_of_ms)
         recent = await self._recent_authors(view.ranking.policy.author_gap, before)
         need = request.k
         while True:
@@ -185,7 +188,7 @@ class Ranker:
     async def _recent_authors(self, gap: int, before: list[bytes]) -> list[bytes]:
         if not gap or not before:
             return []
-        records = await fetch_records(self._store.connection, before[-gap:])
+        records = await self.reads.posts(before[-gap:])
         return [record.author_hash if record else b"" for record in records]
 
     async def _next(
@@ -206,7 +209,7 @@ class Ranker:
         kept = dealings.time_ms > until_ms
         doubtful = np.flatnonzero(kept & (until_ms >= 0))
         posts = [int(state.dealt_post[at]).to_bytes(8, "little") for at in doubtful]
-        records = await fetch_records(self._store.connection, posts)
+        records = await self.reads.posts(posts)
         for at, record in zip(doubtful, records, strict=True):
             kept[at] = record is not None and hash_number(record.author_hash) == int(dealings.author[at])
         return Dealings(dealings.author[kept], dealings.code[kept], dealings.time_ms[kept])

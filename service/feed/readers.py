@@ -8,11 +8,8 @@ from numpy.typing import NDArray
 from scoring.affinity import BLOCK, FRIEND, Circle, Dealings
 from scoring.edges import CREATION, EDGE, MARKER, EdgeRows, codes, join_rows, times_ms
 from service.feed.deadline import Deadline
+from service.feed.reads import Reads
 from service.store import keys
-from service.store.connection import Connection
-
-ROWS_AT_ONCE = 1000
-"""Rows fetched between two looks at the deadline."""
 
 _CODE_BITS = np.uint64(0xFFFF)
 _FIELDS = ("row", "who", "out", "mark", "seen")
@@ -53,11 +50,11 @@ def hash_number(id_hash: bytes) -> int:
     return int.from_bytes(id_hash, "little")
 
 
-async def load_reader(connection: Connection, reader: bytes, *, profile: bool) -> ReaderState:
-    """Fetch a reader's state in one round trip.
+async def load_reader(reads: Reads, reader: bytes, *, profile: bool) -> ReaderState:
+    """Begin a read: fetch the reader's state in one round trip.
 
     Args:
-        connection: to the store.
+        reads: fetches for this worker.
         reader: hash of the reader's id.
         profile: False leaves out what the reader did: interactions and seen posts.
 
@@ -65,8 +62,7 @@ async def load_reader(connection: Connection, reader: bytes, *, profile: bool) -
         StoreUnavailable: the store does not answer.
 
     """
-    values = await connection.mget([keys.key(name, reader) for name in _FIELDS])
-    row, who, out, mark, seen = (value or b"" for value in values)
+    row, who, out, mark, seen = await reads.own([keys.key(name, reader) for name in _FIELDS])
     if not profile:
         row = who = seen = b""
     ties, marks = np.frombuffer(out, dtype=EDGE), np.frombuffer(mark, dtype=EDGE)
@@ -102,23 +98,18 @@ def _marked(marks: NDArray[np.void], relation: int) -> frozenset[int]:
     return frozenset(marks["post"][chosen].tolist())
 
 
-async def load_rows(connection: Connection, circle: Circle, deadline: Deadline) -> tuple[EdgeRows, bool]:
-    """Fetch the rows of a circle, the strongest affinities first.
+async def load_rows(reads: Reads, circle: Circle, deadline: Deadline) -> tuple[EdgeRows, bool]:
+    """Gather the rows of a circle, the strongest affinities first.
 
     Returns:
-        The entries of all rows fetched, `row` being the place in the circle, and whether all rows were fetched.
+        The entries of all rows gathered, `row` being the place in the circle, and whether that is all rows.
 
     Raises:
         StoreUnavailable: the store does not answer.
 
     """
     order = np.argsort(-circle.affinity, kind="stable")
-    packed = circle.person.astype("<u8").tobytes()
-    hashes = [packed[8 * place : 8 * place + 8] for place in order]
-    rows: list[bytes | None] = []
-    for at in range(0, len(hashes), ROWS_AT_ONCE):
-        if at and deadline.passed():
-            break
-        rows += await connection.mget(keys.keys("row", hashes[at : at + ROWS_AT_ONCE]))
+    packed = circle.person[order].astype("<u8").tobytes()
+    rows, whole = await reads.rows([packed[at : at + 8] for at in range(0, len(packed), 8)], deadline)
     joined = join_rows(rows)
-    return EdgeRows(joined.post, joined.stamp, order[joined.row]), len(rows) == len(hashes)
+    return EdgeRows(joined.post, joined.stamp, order[joined.row]), whole

@@ -1,6 +1,5 @@
 """Look candidates up in order of their bounds until the best are certain."""
 
-from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -12,11 +11,10 @@ from scoring.reduce import Candidates, remainder
 from scoring.topk import ByBound, kth_greatest, order_key, settled
 from service.feed.board import CrowdBound
 from service.feed.deadline import Deadline
+from service.feed.reads import Reads
 from service.feed.visible import Gate
-from service.store import keys
-from service.store.connection import Connection
 from service.store.kinds import CODE_MASK
-from service.store.records import PostRecord, crowd_state, read_record
+from service.store.records import PostRecord, crowd_state
 
 FIRST_BATCH = 48
 NEWEST_BATCH = 2000
@@ -51,14 +49,6 @@ class Shortlist:
     exhausted: bool = False
 
 
-async def fetch_records(connection: Connection, posts: Sequence[bytes]) -> list[PostRecord | None]:
-    """Fetch the records of posts, None where there is none."""
-    if not posts:
-        return []
-    values = await connection.mget(keys.keys("post", list(posts)))
-    return [read_record(value) if value else None for value in values]
-
-
 def crowd_sums(records: list[PostRecord], ranking: Ranking, t_ms: int) -> NDArray[np.float64]:
     """Compute the weighted, decayed sum over every edge of each post, shape (n,)."""
     state = crowd_state(records, len(ranking.bank.half_lives_ms))
@@ -71,7 +61,7 @@ class Shortlister:
     """Looks up one feed's candidates.
 
     Args:
-        connection: to the store.
+        reads: fetches for this worker.
         gate: says which posts the reader may see.
         ranking: the compiled policy.
         t_ms: the time of the feed, Unix milliseconds.
@@ -79,8 +69,8 @@ class Shortlister:
 
     """
 
-    def __init__(self, connection: Connection, gate: Gate, ranking: Ranking, t_ms: int, deadline: Deadline) -> None:
-        self._connection = connection
+    def __init__(self, reads: Reads, gate: Gate, ranking: Ranking, t_ms: int, deadline: Deadline) -> None:
+        self._reads = reads
         self._gate = gate
         self._ranking = ranking
         self._t_ms = t_ms
@@ -112,7 +102,8 @@ class Shortlister:
         """
         stranger = self._ranking.policy.affinity.crowd
         most = remainder(bound.of(candidates.post), candidates.share) if stranger else np.zeros(len(candidates.post))
-        bounds = (candidates.known + stranger * most) * factors * noise
+        reach = (candidates.known + stranger * most) * noise
+        bounds = np.where(factors > 0.0, reach, 0.0) * factors
         batch = max(FIRST_BATCH, need + 16)
         order = ByBound(bounds, 4 * batch)
         shortlist, at = Shortlist(), 0
@@ -157,7 +148,7 @@ class Shortlister:
     ) -> list[Found]:
         packed = candidates.post[chosen].astype("<u8").tobytes()
         hashes = [packed[at : at + 8] for at in range(0, len(packed), 8)]
-        looked_up = zip(chosen.tolist(), hashes, await fetch_records(self._connection, hashes), strict=True)
+        looked_up = zip(chosen.tolist(), hashes, await self._reads.posts(hashes), strict=True)
         shown = [(place, post, record) for place, post, record in looked_up if self._gate.lets_through(record)]
         records = [record for _, _, record in shown if record is not None]
         places = np.array([place for place, _, _ in shown], dtype=np.intp)

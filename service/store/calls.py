@@ -9,6 +9,9 @@ from service.store.scripts import Script, load
 
 Argument = bytes | str | int
 
+LOGGED_CHANGES = 10_000
+"""How many entries of the change log are kept; a worker further behind begins anew."""
+
 
 @dataclass(frozen=True, slots=True)
 class Call:
@@ -315,6 +318,12 @@ def raise_marks(slot: int, marks: Iterable[tuple[bytes, bytes]]) -> Call:
 def register_kinds(kinds: Sequence[str], limit: int) -> Call:
     """Give kinds their codes, up to `limit` kinds in all."""
     return Call(load("register_kinds"), [keys.KINDS], [limit, *kinds])
+
+
+def log_changes(people: Iterable[bytes], posts: Iterable[bytes]) -> Call:
+    """Note whose rows and which posts have changed."""
+    blobs = [b"".join(sorted(hashes)) for hashes in (people, posts)]
+    return Call(load("log_changes"), [keys.CHANGES, keys.CHANGED], [LOGGED_CHANGES, *blobs])
 
 
 def trim_board(slot: int, posts: int) -> Call:

@@ -25,11 +25,16 @@ Run = Callable[[Sequence[Call]], Coroutine[Any, Any, list[Any]]]
 
 @dataclass(slots=True)
 class Step:
-    """What is to be done for one entry after its far effects: further calls and marks for the boards, then the end."""
+    """What is to be done for one entry after its far effects: further calls and marks for the boards, then the end.
+
+    `people` and `posts` are those whose rows and values the entry has changed.
+    """
 
     follow: list[Call] = field(default_factory=list)
     marks: dict[int, list[tuple[bytes, bytes]]] = field(default_factory=dict)
     close: list[Call] = field(default_factory=list)
+    people: set[bytes] = field(default_factory=set)
+    posts: set[bytes] = field(default_factory=set)
 
 
 class Driver:
@@ -80,7 +85,17 @@ class Driver:
             at += len(far)
         marks = [calls.raise_marks(slot, pairs) for slot, pairs in _merged(steps).items()]
         await self._run([call for step in steps for call in step.follow] + marks)
-        await self._run([call for step in steps for call in step.close])
+        await self._close(steps, refused=bool(refused))
+
+    async def _close(self, steps: Sequence[Step], *, refused: bool) -> None:
+        """Log what has changed, then close the entries: a crash in between leaves them open, to be logged again.
+
+        Where an event was refused, closing takes its edge out of a row: that is logged besides.
+        """
+        people = {person for step in steps for person in step.people}
+        posts = {post for step in steps for post in step.posts}
+        log = [calls.log_changes(people, posts)] if people or posts else []
+        await self._run([*log, *(call for step in steps for call in step.close), *(log if refused else [])])
 
     def _plan(
         self, entry: Entry, now_ms: int, refused: dict[bytes, str]
@@ -141,6 +156,8 @@ class Driver:
             for (post, _, items), answer in zip((post for _, posts in groups for post in posts), flat, strict=True):
                 author = b"-" if answer[0] == b"" else b"" if answer[0] == NOBODY else answer[0]
                 found += [(item.actor, item.id_hash, author) for item in items]
+                step.posts.add(post)
+                step.people.update(item.actor for item in items)
                 if author != b"-":
                     self._note_marks(step, post, answer[1:])
             found.sort(key=lambda one: one[0])
@@ -159,7 +176,8 @@ class Driver:
         effect = Effect(entry.bucket, "e", entry.seq, entry.low)
         change = [(post, "", [EdgeChange("-", stamp, person)])]
         far = [calls.add_edges(effect, bucket(post), now_ms, self._limits, change)]
-        return far, lambda _: Step(close=[calls.settle_event(person, entry.seq)])
+        close = [calls.settle_event(person, entry.seq)]
+        return far, lambda _: Step(close=close, people={person}, posts={post})
 
     def _post(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
         piece = entry.pieces[0]
@@ -173,7 +191,8 @@ class Driver:
             early = {answer[2][i : i + 8] for i in range(0, len(answer[2]), 8)}
             follow = [calls.learn_author(person, write.post, write.author) for person in sorted(early)]
             follow.append(calls.put_creation(write.author, entry.seq, write.post + answer[1], now_ms, self._limits))
-            step = Step(follow, close=[calls.settle_event(write.author, entry.seq)])
+            close = [calls.settle_event(write.author, entry.seq)]
+            step = Step(follow, close=close, people={write.author}, posts={write.post})
             self._note_marks(step, write.post, answer[3:])
             return step
 
@@ -196,7 +215,7 @@ class Driver:
         person, post = self._hasher.hash(event["actor"]), self._hasher.hash(event["post"])
         effect = Effect(entry.bucket, "w", entry.seq, entry.low)
         far = [calls.withdraw_post(effect, post, event["post"], now_ms, self._limits)]
-        return far, lambda _: Step(close=[calls.settle_event(person, entry.seq)])
+        return far, lambda _: Step(close=[calls.settle_event(person, entry.seq)], posts={post})
 
     async def _erase(self, entry: Entry, now_ms: int, refused: dict[bytes, str]) -> None:
         body = entry.pieces[0].body
@@ -224,7 +243,8 @@ class Driver:
             ]
 
         def then(answers: list[Any]) -> Step:
-            step, edges = Step(), answers[: len(posts)]
+            touched = {post for group in posts for post in group} | set(swept.posts)
+            step, edges = Step(people={swept.person}, posts=touched), answers[: len(posts)]
             for group, call in zip(posts, edges, strict=True):
                 for post, answer in zip(group, call, strict=True):
                     if answer[0] not in (b"", NOBODY):

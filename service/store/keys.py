@@ -26,6 +26,8 @@ bucket, and on a cluster a bucket is one slot. `b` is the bucket, 0 to 127.
 | `page:{b}:` session | string | 8 bytes for each post served in a feed session | 10 minutes |
 | `board:{s}` | sorted set | posts by log2 of their decayed count plus time over half-life, for slot s of the bank | trimmed to the greatest |
 | `floor:{s}` | string | the greatest value that was trimmed from the board | for good |
+| `changes:{log}` | stream | whose rows and which posts have changed, by number without gaps | the newest 10,000 |
+| `changed:{log}` | integer | the last number in the change log | for good |
 | `kinds` | hash | code of each kind | for good |
 | `meta` | hash | hash key, format and bank of the store | for good |
 | `policies` | hash | TOML of each pushed policy | for good |
@@ -37,6 +39,8 @@ _PERSON = ("row", "ids", "who", "name", "erased", "tie", "out", "in", "mark", "s
 _POST = ("post", "wait")
 _PREFIX = {name: [f"{name}:{{{number}}}:".encode() for number in range(128)] for name in (*_PERSON, *_POST, "page")}
 
+CHANGES = b"changes:{log}"
+CHANGED = b"changed:{log}"
 KINDS = b"kinds"
 META = b"meta"
 POLICIES = b"policies"
