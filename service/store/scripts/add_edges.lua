@@ -33,7 +33,7 @@ for i = 2, #KEYS, 2 do
     if fresh then
       post.id = post.id ~= '' and post.id or id
       apply(post, KEYS[i + 1], at + 2, at + 1 + 3 * count)
-      write_post(KEYS[i], post, ttl_ms, now_ms)
+      write_post(KEYS[i], post, #half_lives, ttl_ms, now_ms)
     end
     local answer = board_marks(post, now_ms, half_lives, boards)
     table.insert(answer, 1, post.author_hash)

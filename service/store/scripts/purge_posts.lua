@@ -38,7 +38,7 @@ local function purge(key, post)
   if post.flags == 0 and #post.edges == 0 and #post.kinds == 0 then
     redis.call('DEL', key)
   else
-    write_post(key, post, tonumber(ARGV[4]), tonumber(ARGV[8]))
+    write_post(key, post, #half_lives, tonumber(ARGV[4]), tonumber(ARGV[8]))
   end
 end
 

@@ -50,7 +50,7 @@ if once(KEYS[1], ARGV[1], tonumber(ARGV[2]), tonumber(ARGV[3])) then
     end
     add_edge(post, stamp, now_ms, half_lives)
   end
-  write_post(KEYS[2], post, ttl_ms, now_ms)
+  write_post(KEYS[2], post, #half_lives, ttl_ms, now_ms)
 end
 local answer = { 'ok', creation_stamp(), redis.call('GET', KEYS[3]) or '' }
 for _, mark in ipairs(board_marks(post, now_ms, half_lives, boards)) do

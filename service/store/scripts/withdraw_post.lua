@@ -11,6 +11,6 @@ if post.id ~= '' and post.id ~= ARGV[6] then
 end
 if once(KEYS[1], ARGV[1], tonumber(ARGV[2]), tonumber(ARGV[3])) and post.flags % RECORDED == 0 then
   post.id, post.flags = ARGV[6], post.flags + WITHDRAWN
-  write_post(KEYS[2], post, tonumber(ARGV[4]), tonumber(ARGV[7]))
+  write_post(KEYS[2], post, tonumber(ARGV[5]), tonumber(ARGV[4]), tonumber(ARGV[7]))
 end
 return 'ok'

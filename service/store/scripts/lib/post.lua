@@ -12,17 +12,24 @@ local NOBODY = string.rep('\0', 8)
 
 local function new_post()
   return { flags = 0, audience = 0, form = '', id = '', author = '', event = '', topics = '', edits = {},
-    creation = 0, created = 0, latest = 0, author_hash = NOBODY, edges = {}, kinds = {} }
+    creation = 0, created = 0, latest = 0, author_hash = NOBODY, edges = '', kinds = {} }
 end
 
-local function stamp_ms(stamp)
-  local a, b, c, d, e, f = string.byte(stamp, 3, 8)
+local function stamp_ms(text, at)
+  local a, b, c, d, e, f = string.byte(text, at + 2, at + 7)
   return a + b * 256 + c * 65536 + d * 16777216 + e * 4294967296 + f * 1099511627776
 end
 
 local function stamp_code(stamp)
   local low, high = string.byte(stamp, 1, 2)
   return low + high * 256
+end
+
+-- A kind is {code, padding, count, as-of ms, sums…}: the fields of its layout in their order.
+local CODE, COUNT, AS_OF, BEFORE_SUMS = 1, 3, 4, 4
+
+local function kind_layout(bank_size)
+  return '<HHi4d' .. string.rep('d', bank_size)
 end
 
 local function read_post(value, bank_size)
@@ -40,43 +47,32 @@ local function read_post(value, bank_size)
   end
   post.id, post.author, post.form = text(id_n), text(author_n), text(form_n)
   post.event, post.topics = text(event_n), text(topic_n)
-  for i = 1, edit_n do
-    post.edits[i] = struct.unpack('<d', text(8))
+  if edit_n > 0 then
+    post.edits = { struct.unpack('<' .. string.rep('d', edit_n), value, at) }
+    at = table.remove(post.edits)
   end
-  for i = 1, edge_n do
-    post.edges[i] = text(8)
-  end
+  post.edges = text(8 * edge_n)
+  local layout = kind_layout(bank_size)
   for i = 1, kind_n do
-    local kind = { sums = {} }
-    local _
-    kind.code, _, kind.count, kind.as_of = struct.unpack('<HHi4d', text(16))
-    for j = 1, bank_size do
-      kind.sums[j] = struct.unpack('<d', text(8))
-    end
+    local kind = { struct.unpack(layout, value, at) }
+    at = table.remove(kind)
     post.kinds[i] = kind
   end
   return post
 end
 
 -- Each write prolongs the post's life, up to 12 lifetimes after its creation.
-local function write_post(key, post, ttl_ms, now_ms)
+local function write_post(key, post, bank_size, ttl_ms, now_ms)
   if post.created > 0 then
     ttl_ms = math.max(1, math.min(ttl_ms, post.created + 12 * ttl_ms - now_ms))
   end
-  local parts = { struct.pack(HEADER, 1, post.flags, post.audience, #post.form, #post.edges, #post.kinds, #post.id,
+  local parts = { struct.pack(HEADER, 1, post.flags, post.audience, #post.form, #post.edges / 8, #post.kinds, #post.id,
     #post.author, #post.event, #post.topics, #post.edits, post.creation, post.created, post.latest, post.author_hash),
-    post.id, post.author, post.form, post.event, post.topics }
-  for _, edit_ms in ipairs(post.edits) do
-    parts[#parts + 1] = struct.pack('<d', edit_ms)
-  end
-  for _, stamp in ipairs(post.edges) do
-    parts[#parts + 1] = stamp
-  end
+    post.id, post.author, post.form, post.event, post.topics,
+    struct.pack('<' .. string.rep('d', #post.edits), unpack(post.edits)), post.edges }
+  local layout = kind_layout(bank_size)
   for _, kind in ipairs(post.kinds) do
-    parts[#parts + 1] = struct.pack('<HHi4d', kind.code, 0, kind.count, kind.as_of)
-    for _, sum in ipairs(kind.sums) do
-      parts[#parts + 1] = struct.pack('<d', sum)
-    end
+    parts[#parts + 1] = struct.pack(layout, unpack(kind))
   end
   redis.call('SET', key, table.concat(parts), 'PX', string.format('%.0f', ttl_ms))
 end
