@@ -103,33 +103,34 @@ def _rejects_file(path: Path | None, files: Sequence[str]) -> Iterator[Callable[
 
 
 def _write(write: Callable[[bytes], int], rejected: Rejected) -> None:
-    document = {"file": rejected.file, "line": rejected.line, "reason": rejected.reason, "event": rejected.event}
+    event = orjson.Fragment(rejected.event_json)
+    document = {"file": rejected.file, "line": rejected.line, "reason": rejected.reason, "event": event}
     write(orjson.dumps(document, option=orjson.OPT_APPEND_NEWLINE))
 
 
 def _show(summary: Summary, seconds: float, *, several: bool) -> None:
     rate = rate_per_s(summary.read, seconds)
-    rows = [
-        ("read", f"{summary.read:,} events in {seconds:,.1f} s, {rate:,.0f} events/s"),
-        ("applied", f"{summary.applied:,}"),
-        ("duplicate", f"{summary.duplicate:,}"),
-        ("expired", f"{summary.expired:,}"),
-        ("rejected", f"{summary.rejected:,}"),
-    ]
-    _print_counts(rows)
+    typer.echo(f"read       {summary.read:,} events in {seconds:,.1f} s, {rate:,.0f} events/s")
+    for name in ("applied", "duplicate", "expired", "rejected"):
+        typer.echo(f"{name:<10} {getattr(summary, name):,}")
     if summary.first_rejected:
-        columns = ("file", "line", "reason") if several else ("line", "reason")
-        rows_of = [(one.file, f"{one.line:,}", one.reason) for one in summary.first_rejected]
-        print_table(columns, [row if several else row[1:] for row in rows_of])
+        _show_rejected(summary.first_rejected, several=several)
     more = summary.rejected - len(summary.first_rejected)
     if more:
-        typer.echo(f"The first {SHOWN_REJECTED} rejected lines are shown, {more:,} more are not; --rejects FILE has all.")
+        typer.echo(f"{more:,} more were rejected than the {SHOWN_REJECTED} shown; --rejects FILE writes all of them.")
+
+
+def _show_rejected(rejected: Sequence[Rejected], *, several: bool) -> None:
+    typer.echo()
+    if several:
+        print_table(("file", "line", "reason"), [(one.file, one.line, one.reason) for one in rejected])
+    else:
+        print_table(("line", "reason"), [(one.line, one.reason) for one in rejected])
 
 
 def _advice(stop: Stop, files: Sequence[str]) -> str:
     """Say why an import ended early, and how to go on."""
     if stop.cause == "damaged":
         return f"{stop.file}: {stop.reason}; what could be read was applied"
-    rest = [name for place, name in enumerate(files) if stop.file in files and place >= files.index(stop.file)]
-    command = f"waxwane import --from-line {stop.line} {shlex.join(rest or [STDIN])}"
+    command = f"waxwane import --from-line {stop.line} {shlex.join(files[files.index(stop.file) :])}"
     return f"{stop.file}: {stop.reason}; all before line {stop.line} was applied; go on with: {command}"

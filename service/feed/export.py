@@ -36,18 +36,20 @@ class Exporter:
 
         """
         id_hash = self._store.hasher.hash(person)
-        read = self._store.connection.read
-        values = await self._store.connection.mget([keys.key(name, id_hash) for name in _FIELDS])
+        connection = self._store.connection
+        values = await connection.mget([keys.key(name, id_hash) for name in _FIELDS])
+        ties, tied_by = await connection.read_many([(b"HGETALL", keys.key(name, id_hash)) for name in ("tie", "in")])
+        if values[0] not in (None, person.encode()):  # another id with this hash: all of it is that one's
+            values, ties, tied_by = [None] * len(values), [], []
         name, erased, row, who, seen, undo, posts = values
-        known = name is not None and name.decode() == person
         return {
             "person": person,
-            "known": known,
+            "known": name is not None,
             "erased_up_to": format_ms(int(erased)) if erased else None,
             "edges": await self._edges(row or b"", who or b""),
             "posts": await self._post_ids(posts or b""),
-            "ties": await self._relations(await read("HGETALL", keys.key("tie", id_hash)), "target"),
-            "tied_by": await self._relations(await read("HGETALL", keys.key("in", id_hash)), "actor"),
+            "ties": await self._relations(_pairs(ties), "target"),
+            "tied_by": await self._relations(_pairs(tied_by), "actor"),
             "seen": await self._seen(seen or b""),
             "retracts": len(undo or b"") // EDGE.itemsize,
         }
@@ -57,6 +59,8 @@ class Exporter:
         real = codes(edges["stamp"]) != MARKER
         authors = np.frombuffer(who, dtype="<u8")[: len(edges)][real].tolist()
         edges = edges[real]
+        if codes(edges["stamp"]).max(initial=0) >= len(self._store.kinds.names):
+            await self._store.kinds.refresh()  # another worker has registered a kind meanwhile
         records = await self._records(_hashes(edges["post"].tolist()))
         names = await self._names(authors)
         retracted = (edges["stamp"] & np.uint64(RETRACTED)) != 0
@@ -125,6 +129,10 @@ class Exporter:
             return {}
         names = await self._store.connection.mget(keys.keys("name", _hashes(distinct)))
         return {person: name.decode() if name else None for person, name in zip(distinct, names, strict=True)}
+
+
+def _pairs(flat: list[bytes]) -> dict[bytes, bytes]:
+    return dict(zip(flat[::2], flat[1::2], strict=True))
 
 
 def _hashes(numbers: list[int]) -> list[bytes]:

@@ -132,7 +132,7 @@ class Ranker:
             StoreUnavailable: the store does not answer.
 
         """
-        state = await load_reader(self.reads, self._store.hasher.hash(reader), profile=profile)
+        state = await load_reader(self.reads, reader, self._store.hasher.hash(reader), profile=profile)
         deadline.stage("reader")
         prepared = self._policies.prepared(policy, self._store.kinds.names)
         known = _circle(state, state.dealings, prepared.ranking, t_ms)

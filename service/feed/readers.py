@@ -12,7 +12,7 @@ from service.feed.reads import Reads
 from service.store import keys
 
 _CODE_BITS = np.uint64(0xFFFF)
-_FIELDS = ("row", "who", "out", "mark", "seen")
+_FIELDS = ("row", "who", "out", "mark", "seen", "name")
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,19 +50,25 @@ def hash_number(id_hash: bytes) -> int:
     return int.from_bytes(id_hash, "little")
 
 
-async def load_reader(reads: Reads, reader: bytes, *, profile: bool) -> ReaderState:
+async def load_reader(reads: Reads, reader_id: str, reader: bytes, *, profile: bool) -> ReaderState:
     """Begin a read: fetch the reader's state in one round trip.
+
+    A reader whose hash is that of another known id has no state: what is stored there is the other's.
 
     Args:
         reads: fetches for this worker.
-        reader: hash of the reader's id.
+        reader_id: the reader's id.
+        reader: its hash.
         profile: False leaves out what the reader did: interactions and seen posts.
 
     Raises:
         StoreUnavailable: the store does not answer.
 
     """
-    row, who, out, mark, seen = await reads.own([keys.key(name, reader) for name in _FIELDS])
+    *own, name = await reads.own([keys.key(name, reader) for name in _FIELDS])
+    if name not in (b"", reader_id.encode()):
+        own = [b""] * len(own)
+    row, who, out, mark, seen = own
     if not profile:
         row = who = seen = b""
     ties, marks = np.frombuffer(out, dtype=EDGE), np.frombuffer(mark, dtype=EDGE)

@@ -88,7 +88,7 @@ def opened(name: str) -> Iterator[Source]:
 
     """
     if name == STDIN:
-        yield Source("standard input", sys.stdin.buffer)
+        yield Source(name, sys.stdin.buffer)
         return
     with _open(name) as file:
         yield Source(name, file)

@@ -3,7 +3,7 @@
 from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Final
 
 import orjson
 
@@ -52,7 +52,7 @@ class Importer:
         """
         lines = [line for line in batch if line.content is not None]
         parsed = parse_body(b"\n".join(_contents(lines)), NDJSON, {}, max_batch=len(lines))
-        reasons = {batch_line.number: TOO_LONG for batch_line in batch if batch_line.content is None}
+        reasons = {line.number: TOO_LONG for line in batch if line.content is None}
         reasons |= {lines[one.index].number: one.reason for one in parsed.rejected}
         verdicts = self._persist([event for _, event in parsed.events])
         for (index, _), verdict in zip(parsed.events, verdicts, strict=True):
@@ -61,7 +61,7 @@ class Importer:
         self._count(verdicts)
         for line in batch:
             if line.number in reasons:
-                self.summary.reject(Rejected(file, line.number, reasons[line.number], _event_of(line)))
+                self.summary.reject(Rejected(file, line.number, reasons[line.number], _event_json(line)))
 
     def _persist(self, events: Sequence[AnyEvent]) -> list[Verdict]:
         """Apply events; where the store is away, wait and try again, which changes nothing but the counts."""
@@ -85,10 +85,11 @@ def _contents(lines: Sequence[Line]) -> list[bytes]:
     return [line.content or b"" for line in lines]
 
 
-def _event_of(line: Line) -> Any:  # noqa: ANN401  whatever the line held
+def _event_json(line: Line) -> bytes:
     if line.content is None:
-        return None
+        return b"null"
     try:
-        return orjson.loads(line.content)
+        orjson.loads(line.content)
     except orjson.JSONDecodeError:
-        return line.content.decode("utf-8", "replace")
+        return orjson.dumps(line.content.decode("utf-8", "replace"))
+    return line.content

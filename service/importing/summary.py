@@ -16,14 +16,15 @@ class Rejected:
         file: the input it stands in.
         line: its number there, from 1.
         reason: what was wrong, in words.
-        event: what the line held: JSON where it is JSON, else its text; None where it is too long.
+        event_json: JSON of what the line held: the line itself, or its text where it is no JSON, or null where it is
+            too long.
 
     """
 
     file: str
     line: int
     reason: str
-    event: Any
+    event_json: bytes
 
 
 @dataclass(frozen=True, slots=True)

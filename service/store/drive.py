@@ -205,7 +205,7 @@ class Driver:
 
         def then(answers: list[Any]) -> Step:
             if answers[0]:
-                return Step(close=[calls.settle_event(tie.source, entry.seq)])
+                return Step(close=[calls.settle_event(tie.source, entry.seq, entry.pieces[0].id_hash)])
             return Step(close=[calls.put_outgoing(entry.seq, tie, self._limits.oldest_ms(now_ms))])
 
         return far, then
@@ -215,7 +215,12 @@ class Driver:
         person, post = self._hasher.hash(event["actor"]), self._hasher.hash(event["post"])
         effect = Effect(entry.bucket, "w", entry.seq, entry.low)
         far = [calls.withdraw_post(effect, post, event["post"], now_ms, self._limits)]
-        return far, lambda _: Step(close=[calls.settle_event(person, entry.seq)], posts={post})
+
+        def then(answers: list[Any]) -> Step:
+            forget = b"" if answers[0] == b"ok" else entry.pieces[0].id_hash
+            return Step(close=[calls.settle_event(person, entry.seq, forget)], posts={post})
+
+        return far, then
 
     async def _erase(self, entry: Entry, now_ms: int, refused: dict[bytes, str]) -> None:
         body = entry.pieces[0].body

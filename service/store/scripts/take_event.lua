@@ -1,13 +1,13 @@
--- use: slots, outbox, person, heard
+-- use: slots, rows, outbox, person, heard
 -- Take an event whose effects lie in other slots: a post, a tie or a withdrawal.
 -- KEYS[1] seq:{b} · KEYS[2] outbox:{b} · KEYS[3] name · KEYS[4] erased · KEYS[5] ids · KEYS[6] heard (packed) ·
---   KEYS[7] row (packed) · KEYS[8] tie (hash)
+--   KEYS[7] row (packed) · KEYS[8] tie (hash) · KEYS[9] who (packed)
 -- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime, ms · ARGV[4] person id ·
 --   ARGV[5] event id hash · ARGV[6] event time, ms · ARGV[7] outbox piece · ARGV[8] what earlier outstanding
 --   entries must be settled first: those that hold these bytes ('' none) · ARGV[9] most edges in the row, 0 any ·
 --   ARGV[10] most ties, 0 any · ARGV[11] the tie's target hash · ARGV[12] 1 where an erasure does not undo the event
 -- Returns {outcome, number or 0, low, outstanding entries to settle first}; outcomes as in take_interactions.lua
--- Costs 9 to 15 commands.
+-- Costs 9 to 16 commands, 6 more where old edges leave.
 local event_ms, ttl_ms = tonumber(ARGV[6]), ARGV[3]
 local heard = redis.call('GET', KEYS[6]) or ''
 if find_slot(heard, ARGV[5], 16) or find_slot(redis.call('GET', KEYS[5]) or '', ARGV[5], 8) then
@@ -18,8 +18,11 @@ if refusal then
   return { refusal, 0, 0, {} }
 end
 local row_limit, tie_limit = tonumber(ARGV[9]), tonumber(ARGV[10])
-if row_limit > 0 and redis.call('STRLEN', KEYS[7]) / 16 >= row_limit then
-  return { 4, 0, 0, {} }
+if row_limit > 0 then
+  trim_row(KEYS[7], KEYS[5], KEYS[9], tonumber(ARGV[2]))
+  if redis.call('STRLEN', KEYS[7]) / 16 >= row_limit then
+    return { 4, 0, 0, {} }
+  end
 end
 if tie_limit > 0 and redis.call('HLEN', KEYS[8]) >= tie_limit and redis.call('HEXISTS', KEYS[8], ARGV[11]) == 0 then
   return { 4, 0, 0, {} }

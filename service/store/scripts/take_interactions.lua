@@ -1,4 +1,4 @@
--- use: slots, outbox, person
+-- use: slots, rows, outbox, person
 -- Append a bucket's new interactions to their actors' rows and number what they change elsewhere.
 -- KEYS[1] seq:{b} integer · KEYS[2] outbox:{b} sorted set · then 7 for each person:
 --   row, ids, who (packed lists), name, erased (strings), undo, heard (packed lists)
@@ -10,17 +10,6 @@
 -- Costs 9 commands a person and 4 in all.
 local now_us, oldest_ms, ttl_ms, limit = ARGV[1], tonumber(ARGV[2]), ARGV[3], tonumber(ARGV[4])
 local outcomes, pieces, unsettled, at = {}, {}, {}, 5
-
-local function trim(row_key, ids_key, who_key)
-  local head = redis.call('GETRANGE', row_key, 0, 15)
-  if #head < 16 or slot_ms(head, 1) >= oldest_ms then
-    return
-  end
-  local row, cut = drop_older(redis.call('GET', row_key), oldest_ms)
-  redis.call('SET', row_key, row)
-  redis.call('SET', ids_key, string.sub(redis.call('GET', ids_key), cut / 2 + 1))
-  redis.call('SET', who_key, string.sub(redis.call('GET', who_key), cut / 2 + 1))
-end
 
 local function judge(person, id_hash, edge)
   if find_slot(person.ids, id_hash, 8) or find_slot(person.heard, id_hash, 16) then
@@ -57,7 +46,7 @@ end
 
 for i = 3, #KEYS, 7 do
   local row_key, ids_key, who_key = KEYS[i], KEYS[i + 1], KEYS[i + 2]
-  trim(row_key, ids_key, who_key)
+  trim_row(row_key, ids_key, who_key, oldest_ms)
   local person = { id = ARGV[at], ids = redis.call('GET', ids_key) or '', undo = redis.call('GET', KEYS[i + 5]) or '',
     heard = redis.call('GET', KEYS[i + 6]) or '', name_key = KEYS[i + 3], erased_key = KEYS[i + 4], edges = {},
     added = {} }

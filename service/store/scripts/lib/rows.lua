@@ -1,0 +1,11 @@
+-- Drop a row's leading edges older than `oldest_ms`, and what stands beside them; the lists keep their lifetime.
+local function trim_row(row_key, ids_key, who_key, oldest_ms)
+  local head = redis.call('GETRANGE', row_key, 0, 15)
+  if #head < 16 or slot_ms(head, 1) >= oldest_ms then
+    return
+  end
+  local row, cut = drop_older(redis.call('GET', row_key), oldest_ms)
+  redis.call('SET', row_key, row, 'KEEPTTL')
+  redis.call('SET', ids_key, string.sub(redis.call('GET', ids_key), cut / 2 + 1), 'KEEPTTL')
+  redis.call('SET', who_key, string.sub(redis.call('GET', who_key), cut / 2 + 1), 'KEEPTTL')
+end
