@@ -42,7 +42,9 @@ class ByBound:
 
     def __init__(self, bounds: NDArray[np.float64], front: int) -> None:
         self._bounds = bounds
-        self._places = self._front(front)
+        self._places = np.empty(0, dtype=np.intp)
+        self._rest = np.arange(len(bounds))
+        self._sort(front)
 
     def __len__(self) -> int:
         return len(self._bounds)
@@ -58,14 +60,20 @@ class ByBound:
         return float(self._bounds[self._places[at]])
 
     def _reach(self, count: int) -> None:
-        if count > len(self._places) < len(self._bounds):
-            self._places = self._front(max(count, 4 * len(self._places)))
+        if count > len(self._places) and len(self._rest):
+            self._sort(max(count, 4 * len(self._places)) - len(self._places))
 
-    def _front(self, count: int) -> NDArray[np.intp]:
-        if count >= len(self._bounds):
-            return np.argsort(-self._bounds)
-        front = np.argpartition(-self._bounds, count)[:count]
-        return front[np.argsort(-self._bounds[front])]
+    def _sort(self, count: int) -> None:
+        """Sort the next `count`; those sorted before keep their places, or equal bounds would change theirs."""
+        falling = -self._bounds[self._rest]
+        if count < len(falling):
+            split = np.argpartition(falling, count)
+            chosen, left = split[:count], split[count:]
+        else:
+            chosen, left = np.arange(len(falling)), np.empty(0, dtype=np.intp)
+        ordered = chosen[np.argsort(falling[chosen])]
+        self._places = np.concatenate((self._places, self._rest[ordered]))
+        self._rest = self._rest[left]
 
 
 def settled(kth_score: float, next_bound: float) -> bool:

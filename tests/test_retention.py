@@ -7,6 +7,7 @@ from typing import Any
 
 import pytest
 import redis
+import tomli_w
 
 from service.engine import Engine
 from service.store import keys
@@ -20,6 +21,14 @@ RETENTION_MS = 30 * DAY_MS
 LIFE_MS = RETENTION_MS + DAY_MS
 POLICY = random_policy(Random(3)) | {
     "freshness": {"curve": "half_life", "half_life": "1h"},
+    "affinity": {
+        "stranger": 0.5,
+        "follow": 1.0,
+        "friend": 2.0,
+        "ceiling": 9.0,
+        "half_life": "1h",
+        "gain": {"like": 0.3},
+    },
     "weights": {"post": 1.0, "post.note": 1.5, "like": 0.5, "share": 2.0},
 }
 """A half-life of an hour: what is older than retention is worth less than 2^-720, forgotten or not."""
@@ -27,15 +36,13 @@ POLICY = random_policy(Random(3)) | {
 
 @pytest.fixture
 async def engine(redis_db: str) -> AsyncIterator[Engine]:
-    import tomli_w  # noqa: PLC0415  only to write the policy down
-
     async with running(redis_db, tomli_w.dumps(POLICY)) as engine:
         yield engine
 
 
-def limit(engine: Engine, **limits: int) -> None:
+def limit(engine: Engine, *, row_edges: int = 1_000, ties: int = 1_000, seen_posts: int = 1_000) -> None:
     """Let the store keep less for one person."""
-    engine.store.limits = replace(engine.store.limits, **limits)
+    engine.store.limits = replace(engine.store.limits, row_edges=row_edges, ties=ties, seen_posts=seen_posts)
     engine.store._set_up()
 
 
@@ -81,7 +88,7 @@ def assert_passing(url: str, names: Mapping[str, int]) -> None:
 
 
 async def test_the_edge_of_retention(engine: Engine) -> None:
-    """An event exactly as old as retention is applied, one a millisecond older is answered expired and changes nothing."""
+    """An event exactly as old as retention is applied; one a millisecond older is expired and changes nothing."""
     edge_ms = NOW_MS - RETENTION_MS
     events = [post(0, edge_ms), like(0, edge_ms), tie(0, edge_ms, "mina"), seen(0, edge_ms, "bed 0")]
     assert await outcomes(engine, events, NOW_MS) == ["applied"] * 4
@@ -139,8 +146,8 @@ async def test_feeds_are_exact_on_both_sides_of_trimming(engine: Engine) -> None
     for day in range(0, 90, 3):
         now_ms = NOW_MS + day * DAY_MS
         batch = [post(day, now_ms - 5, draw.choice(people))]
-        batch += [tie(10 * day + place, now_ms, name, actor=draw.choice(["joel", "walt"])) for place, name in
-            enumerate(("mina", "ada"))]  # fmt: skip
+        for place, name in enumerate(("mina", "ada")):
+            batch.append(tie(10 * day + place, now_ms, name, actor=draw.choice(["joel", "walt"])))
         for place in range(12):
             at_ms = now_ms - draw.choice([0, 60_000, 3_600_000, 5 * DAY_MS, RETENTION_MS])
             on = f"bed {draw.randrange(max(0, day - 9), day + 1, 3)}"
@@ -165,11 +172,10 @@ async def test_a_full_row_refuses_and_empties_with_time(engine: Engine) -> None:
         [verdict] = await send(engine, [more], NOW_MS)
         assert verdict.outcome == "rejected"
         assert verdict.reason == (
-            "actor: this person has reached what is kept for one person: 5 edges within retention and 20000 ties"
+            "actor: this person has reached what is kept for one person: 5 edges within retention and 1000 ties"
         )
-        assert await outcomes(engine, [more | {"actor": "walt", "id": f"w{more['id']}", "post": more["id"]}], NOW_MS) == [
-            "applied"
-        ]
+        others = more | {"actor": "walt", "id": f"w{more['id']}", "post": more["id"]}
+        assert await outcomes(engine, [others], NOW_MS) == ["applied"]
     assert await outcomes(engine, [like(0, NOW_MS)], NOW_MS) == ["duplicate"]
     back = {"id": "r", "type": "retract", "at": NOW_MS, "actor": "ada", "event": "l1"}
     assert await outcomes(engine, [back, tie(1, NOW_MS, "mina", actor="ada")], NOW_MS) == ["applied"] * 2
@@ -202,9 +208,10 @@ async def test_a_batch_fills_a_row_to_its_limit(engine: Engine) -> None:
 async def test_too_many_ties(engine: Engine) -> None:
     """Past the most ties a new one is rejected; those that stand may change, and no feed changes by a refusal."""
     limit(engine, ties=2)
-    assert await outcomes(engine, [tie(0, NOW_MS, "mina"), tie(1, NOW_MS, "ada"), post(0, NOW_MS)], NOW_MS) == [
-        "applied"
-    ] * 3
+    assert (
+        await outcomes(engine, [tie(0, NOW_MS, "mina"), tie(1, NOW_MS, "ada"), post(0, NOW_MS)], NOW_MS)
+        == ["applied"] * 3
+    )
     [verdict] = await send(engine, [tie(2, NOW_MS, "walt")], NOW_MS)
     assert verdict.outcome == "rejected"
     assert "2 ties" in (verdict.reason or "")
@@ -217,20 +224,24 @@ async def test_too_many_ties(engine: Engine) -> None:
 
 
 async def test_ties_taken_back_make_room(engine: Engine) -> None:
-    """A relation of `none` that retention has let go no longer counts against the most ties."""
+    """Only relations that stand count against the most ties; the traces of `none` are bounded and leave in time."""
     limit(engine, ties=2)
-    events = [tie(0, NOW_MS, "mina"), tie(1, NOW_MS + 1, "mina", "none"), tie(2, NOW_MS, "ada")]
-    assert await outcomes(engine, events, NOW_MS) == ["applied"] * 3
-    later_ms = NOW_MS + RETENTION_MS + 2
-    assert await outcomes(engine, [tie(3, later_ms, "walt")], later_ms) == ["applied"]
-    assert await outcomes(engine, [tie(4, later_ms, "otto")], later_ms) == ["rejected"]
+    for number in range(200):
+        at_ms = NOW_MS + number * DAY_MS
+        made = [tie(number, at_ms, f"plot {number}"), tie(1000 + number, at_ms + 1, f"plot {number}", "none")]
+        assert await outcomes(engine, [*made, tie(2000 + number, at_ms, "mina")], at_ms) == ["applied"] * 3
+    assert await outcomes(engine, [tie(3000, at_ms, "ada")], at_ms) == ["applied"]
+    assert await outcomes(engine, [tie(3001, at_ms, "walt")], at_ms) == ["rejected"]
+    assert len((await engine.export("joel", at_ms))["ties"]) <= 64 + 2 * 2
 
 
 async def test_seen_posts_are_bounded(engine: Engine) -> None:
     """Of more seen posts than are kept the newest stay, on equal times those with the greater hashes."""
     limit(engine, seen_posts=3)
-    await send(engine, [seen(0, NOW_MS - 1, "a"), seen(1, NOW_MS, "b", "c", "d", "e"), seen(2, NOW_MS + 1, "f")], NOW_MS)
-    newest = sorted(map(engine.store.hasher.hash, "bcde"))[-2:] + [engine.store.hasher.hash("f")]
+    await send(
+        engine, [seen(0, NOW_MS - 1, "a"), seen(1, NOW_MS, "b", "c", "d", "e"), seen(2, NOW_MS + 1, "f")], NOW_MS
+    )
+    newest = [*sorted(map(engine.store.hasher.hash, "bcde"))[-2:], engine.store.hasher.hash("f")]
     times_ms = (NOW_MS, NOW_MS, NOW_MS + 1)
     entries = [each + stamp(at_ms, 0) for each, at_ms in zip(newest, times_ms, strict=True)]
     assert await kept(engine, "seen", "joel") == b"".join(entries)
@@ -240,11 +251,12 @@ async def test_an_old_post_lives_while_it_is_talked_about(engine: Engine, redis_
     """A post beyond retention is still shown while somebody followed comments on it, up to 12 lifetimes."""
     await send(engine, [post(0, NOW_MS), tie(0, NOW_MS, "ada"), like(0, NOW_MS)], NOW_MS)
     post_key = keys.key("post", engine.store.hasher.hash("bed 0"))
-    for month in range(1, 14):
+    for month in range(1, 13):
         now_ms = NOW_MS + month * RETENTION_MS
         assert await outcomes(engine, [like(month, now_ms)], now_ms) == ["applied"]
         [(name, score)] = await ranked(engine, "joel", now_ms)
-        assert (name, score) == ("bed 0", pytest.approx(0.5 * POLICY["affinity"]["follow"]))
+        assert name == "bed 0"
+        assert score == pytest.approx(0.5 * POLICY["affinity"]["follow"])
         with redis.Redis.from_url(redis_db) as client:
             left_ms = NOW_MS + 12 * LIFE_MS - now_ms
-            assert min(left_ms, LIFE_MS) - 60_000 < client.pttl(post_key) <= min(left_ms, LIFE_MS) or left_ms < 0
+            assert min(left_ms, LIFE_MS) - 60_000 < client.pttl(post_key) <= min(left_ms, LIFE_MS)

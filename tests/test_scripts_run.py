@@ -141,6 +141,7 @@ def test_limits_of_one_person(store: Store) -> None:
     assert store.run(calls.take_event(event(), NOW_MS, LIMITS, writes_row=True)) == [4, 0, 0, []]
     for target in (JOEL, ADA):
         store.client.hset(keys.key("tie", MINA), target, stamp(NOW_MS, 1) + b"e")
+        store.client.append(keys.key("out", MINA), target + stamp(NOW_MS, 1))
     assert store.run(calls.take_event(event(), NOW_MS, LIMITS, tie_target=BED)) == [4, 0, 0, []]
     assert store.run(calls.take_event(event(), NOW_MS, LIMITS, tie_target=ADA))[0] == 0
 

@@ -141,7 +141,7 @@ def take_event(
     """
     number, person = bucket(event.person), event.person
     script_keys = [keys.seq(number), keys.outbox(number)]
-    script_keys += [keys.key(name, person) for name in ("name", "erased", "ids", "heard", "row", "tie", "who")]
+    script_keys += [keys.key(name, person) for name in ("name", "erased", "ids", "heard", "row", "tie", "who", "out")]
     args: list[Argument] = [now_ms * 1000, limits.oldest_ms(now_ms), limits.ttl_ms, event.person_id, event.id_hash]
     args += [event.event_ms, event.piece, before, limits.row_edges if writes_row else 0]
     args += [limits.ties if tie_target else 0, tie_target, int(lasting)]

@@ -1,7 +1,7 @@
 -- use: slots, rows, outbox, person, heard
 -- Take an event whose effects lie in other slots: a post, a tie or a withdrawal.
 -- KEYS[1] seq:{b} · KEYS[2] outbox:{b} · KEYS[3] name · KEYS[4] erased · KEYS[5] ids · KEYS[6] heard (packed) ·
---   KEYS[7] row (packed) · KEYS[8] tie (hash) · KEYS[9] who (packed)
+--   KEYS[7] row (packed) · KEYS[8] tie (hash) · KEYS[9] who · KEYS[10] out (packed)
 -- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime, ms · ARGV[4] person id ·
 --   ARGV[5] event id hash · ARGV[6] event time, ms · ARGV[7] outbox piece · ARGV[8] what earlier outstanding
 --   entries must be settled first: those that hold these bytes ('' none) · ARGV[9] most edges in the row, 0 any ·
@@ -24,7 +24,11 @@ if row_limit > 0 then
     return { 4, 0, 0, {} }
   end
 end
-if tie_limit > 0 and redis.call('HLEN', KEYS[8]) >= tie_limit and redis.call('HEXISTS', KEYS[8], ARGV[11]) == 0 then
+-- Traces of `none` count for half: they leave when there are more of them than ties (put_outgoing.lua).
+local function ties_full()
+  return redis.call('STRLEN', KEYS[10]) / 16 >= tie_limit or redis.call('HLEN', KEYS[8]) >= 64 + 2 * tie_limit
+end
+if tie_limit > 0 and ties_full() and redis.call('HEXISTS', KEYS[8], ARGV[11]) == 0 then
   return { 4, 0, 0, {} }
 end
 remember(KEYS[6], heard, ARGV[5], event_ms, tonumber(ARGV[2]), ttl_ms)
