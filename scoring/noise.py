@@ -19,8 +19,9 @@ def gumbel(seed: int, post: NDArray[np.uint64]) -> NDArray[np.float64]:
     Returns:
         Noise, shape (n,), the same for the same seed and post.
     """
-    uniform = (_mix(post ^ _mix(np.array([seed], dtype=np.uint64))) >> np.uint64(11)).astype(np.float64)
-    noise: NDArray[np.float64] = -np.log(-np.log((uniform + 0.5) * 2.0**-53))
+    mixed = _mix(post ^ _mix(np.array([seed], dtype=np.uint64)))
+    uniform = ((mixed >> np.uint64(12)).astype(np.float64) + 0.5) * 2.0**-52  # of 52 bits: with 53, 1.0 would occur
+    noise: NDArray[np.float64] = -np.log(-np.log(uniform))
     return noise
 
 

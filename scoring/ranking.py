@@ -82,8 +82,17 @@ class Ranking:
         ages = np.linspace(0.0, horizon_ms, _CHECKED_AGES)
         step = ages[1]
         with np.errstate(over="ignore", invalid="ignore"):
-            ratio = np.max(self.crowd_freshness(ages) * np.exp2(ages / half_life))
+            ratio = np.max(self._relative(ages, half_life))
         return float(ratio * 2.0 ** (step / half_life)) if np.isfinite(ratio) else float("inf")
+
+    def _relative(self, age_ms: Values, half_life_ms: float) -> Values:
+        """Return crowd_freshness(age) / 2^(-age / half_life); a long age over- or underflows neither by itself."""
+        curve, parts = self.policy.curve, self.fit.coefficients != 0.0
+        half_lives, coefficients = np.array(self.bank.half_lives_ms)[parts], self.fit.coefficients[parts]
+        if self.fit.exact and isinstance(curve, HalfLife):
+            half_lives = np.array([curve.half_life_ms])
+        ratio: Values = np.exp2(age_ms[:, None] * (1.0 / half_life_ms - 1.0 / half_lives)) @ coefficients
+        return ratio
 
 
 def compile_policy(policy: Policy, bank: Bank, kinds: Sequence[str], horizon_ms: float) -> Ranking:

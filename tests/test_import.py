@@ -80,11 +80,11 @@ def counts(summary: Any) -> list[int]:
 def state(url: str) -> int:
     """How many edges are stored in people's rows."""
     with redis.Redis.from_url(url) as client:
-        return sum(client.strlen(key) // 16 for key in client.keys("ROWS"))
+        return sum(client.strlen(key) // 16 for key in client.keys("row:*"))
 
 
 MIXED: list[Event | bytes] = [
-    {"id": "e1", "type": "post", "at": 0, "actor": "mina", "post": "p1", "form": "photo"},  # 1, at set below
+    {"id": "e1", "type": "post", "at": now_ms() - 2_000, "actor": "mina", "post": "p1", "form": "photo"},  # 1
     like(1),  # 2
     b"",  # 3
     like(2),  # 4
@@ -97,7 +97,7 @@ MIXED: list[Event | bytes] = [
     like(5, post=7),  # 11
     like(6, at=now_ms() + 3_600_000),  # 12
     b"   ",  # 13
-    {"id": "e2", "type": "tie", "at": 0, "actor": "joel", "target": "mina", "relation": "follow"},  # 14
+    {"id": "e2", "type": "tie", "at": now_ms() - 2_000, "actor": "joel", "target": "mina", "relation": "follow"},  # 14
     like(7),  # 15
 ]
 
@@ -105,7 +105,9 @@ MIXED: list[Event | bytes] = [
 @pytest.fixture
 def mixed(tmp_path: Path) -> Path:
     """A file with good, repeated, expired and rejected lines."""
-    timed = [event | {"at": now_ms() - 2_000} if isinstance(event, dict) and not event["at"] else event for event in MIXED]
+    timed = [
+        event | {"at": now_ms() - 2_000} if isinstance(event, dict) and not event["at"] else event for event in MIXED
+    ]
     path = tmp_path / "mixed.ndjson"
     path.write_bytes(lines(timed))
     return path
@@ -274,7 +276,7 @@ def test_endless_line_takes_no_memory() -> None:
     """A line of 64 MiB is skipped piece by piece."""
     tracemalloc.start()
     try:
-        read = list(read_lines(io.BufferedReader(Endless(64 << 20))))  # type: ignore[arg-type]  # read only
+        read = list(read_lines(io.BufferedReader(Endless(64 << 20))))
         peak_bytes = tracemalloc.get_traced_memory()[1]
     finally:
         tracemalloc.stop()
@@ -289,9 +291,11 @@ class Endless(io.RawIOBase):
         self.left = left
 
     def readable(self) -> bool:
+        """Say yes."""
         return True
 
     def readinto(self, buffer: Any) -> int:
+        """Fill the buffer as far as bytes are left."""
         count = min(self.left, len(buffer))
         buffer[:count] = b"x" * count
         self.left -= count
@@ -325,6 +329,7 @@ class Away:
         self.pauses: list[float] = []
 
     def apply(self, events: Sequence[AnyEvent], _now_ms: int) -> list[Verdict]:
+        """Fail, or take the events."""
         self.calls.append(len(events))
         if self.first < len(self.calls) <= self.first + self.failures:
             raise StoreUnavailable
@@ -360,16 +365,19 @@ def test_store_stays_away(tmp_path: Path) -> None:
     assert summary.stop == Stop("store", str(path), 1_003, reason)
 
 
-def test_go_on_after_the_store_was_away(redis_db: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+@pytest.mark.parametrize(("error", "status"), [(StoreUnavailable, 2), (KeyboardInterrupt, 130)])
+def test_go_on(
+    redis_db: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, error: type[BaseException], status: int
+) -> None:
     """The message names the command that goes on where the import stopped, and that command takes the rest."""
     first, second = tmp_path / "all we have", tmp_path / "more"
     first.write_bytes(lines([like(number) for number in range(1_500)]))
     second.write_bytes(lines([like(2_000)]))
     with monkeypatch.context() as patch:
         patch.setattr(batch, "PAUSES_S", ())
-        patch.setattr(Engine, "apply", fails_after_one_batch(Engine.apply))
+        patch.setattr(Engine, "apply", fails_after_one_batch(Engine.apply, error))
         result = CliRunner().invoke(build(), ["import", "--store", redis_db, str(first), str(second)])
-    assert result.exit_code == 2
+    assert result.exit_code == status
     assert "applied    1,000\n" in result.stdout
     told = result.stderr.strip().partition("; all before line 1001 was applied; go on with: waxwane import ")[2]
     assert shlex.split(told) == ["--from-line", "1001", str(first), str(second)]
@@ -377,20 +385,20 @@ def test_go_on_after_the_store_was_away(redis_db: str, tmp_path: Path, monkeypat
     assert state(redis_db) == 1_501
 
 
-def fails_after_one_batch(apply: Callable[..., Any]) -> Callable[..., Any]:
+def fails_after_one_batch(apply: Callable[..., Any], error: type[BaseException]) -> Callable[..., Any]:
     calls: list[int] = []
 
     async def run_once(engine: Engine, events: Sequence[AnyEvent], at_ms: int) -> list[Verdict]:
         calls.append(len(events))
         if len(calls) > 1:
-            raise StoreUnavailable
+            raise error
         return list(await apply(engine, events, at_ms))
 
     return run_once
 
 
 def test_interrupted(redis_db: str) -> None:
-    """Ctrl-C ends the import with the counts so far and the line to go on from."""
+    """Ctrl-C ends the import after the batch under way, with the counts so far and the line to go on from."""
     with subprocess.Popen(
         [*COMMAND, "--store", redis_db, "-"],
         stdin=subprocess.PIPE,
@@ -416,7 +424,9 @@ def test_progress_on_a_terminal(redis_db: str, tmp_path: Path) -> None:
     path = tmp_path / "events"
     path.write_bytes(lines([like(number) for number in range(1_500)]))
     main_side, terminal = pty.openpty()
-    status = subprocess.run([*COMMAND, "--store", redis_db, str(path)], stdout=terminal, stderr=terminal, cwd=ROOT, check=False)
+    status = subprocess.run(
+        [*COMMAND, "--store", redis_db, str(path)], stdout=terminal, stderr=terminal, cwd=ROOT, check=False
+    )
     os.close(terminal)
     shown = b""
     with contextlib.suppress(OSError):  # Linux says so at the end of a terminal.

@@ -12,6 +12,7 @@ import tomli_w
 from service.engine import Engine
 from service.store import keys
 from service.store.pieces import stamp
+from service.store.records import read_record
 from tests.engines import DAY_MS, ranked, running, send
 from tests.oracle import Oracle, assert_same_feed
 from tests.worlds import random_policy
@@ -260,3 +261,31 @@ async def test_an_old_post_lives_while_it_is_talked_about(engine: Engine, redis_
         with redis.Redis.from_url(redis_db) as client:
             left_ms = NOW_MS + 12 * LIFE_MS - now_ms
             assert min(left_ms, LIFE_MS) - 60_000 < client.pttl(post_key) <= min(left_ms, LIFE_MS)
+
+
+async def test_a_post_edited_without_end_stays_small(engine: Engine) -> None:
+    """Of 400 post events in any order the first and the newest are remembered; the post is as if all were."""
+    events = [post(number, NOW_MS - number) | {"post": "bed 0"} for number in range(400)]
+    events[250]["audience"] = "nobody"
+    Random(1).shuffle(events)
+    assert set(await outcomes(engine, [*events, tie(0, NOW_MS, "mina")], NOW_MS)) == {"applied"}
+    record = read_record(await kept(engine, "post", "bed 0"))
+    assert record.post_events_ms == (NOW_MS - 399, *range(NOW_MS - 254, NOW_MS + 1))
+    [(name, score)] = await ranked(engine, "joel", NOW_MS)
+    assert name == "bed 0"
+    assert score == pytest.approx(1.5 * 2.0 ** (-399 / 3_600_000), rel=1e-12)
+
+
+async def test_a_flood_ahead_of_the_clock_is_bounded(engine: Engine) -> None:
+    """Thousands of edges 5 minutes ahead do not pile up in the post, and are exact once their time has come."""
+    ahead_ms, people = 300_000, 2500
+    await send(engine, [post(0, NOW_MS), tie(0, NOW_MS, "mina")], NOW_MS)
+    likes = [like(number, NOW_MS + ahead_ms, f"plot {number}") for number in range(people)]
+    assert set(await outcomes(engine, likes, NOW_MS)) == {"applied"}
+    record = read_record(await kept(engine, "post", "bed 0"))
+    assert len(record.edges) == 8 * 1024
+    [(_, soon)] = await ranked(engine, "joel", NOW_MS)
+    exact = 1.5 + 0.5 * 0.5 * people
+    assert exact <= (soon or 0.0) <= exact * 2.0 ** (ahead_ms / 3_600_000)
+    [(_, then)] = await ranked(engine, "joel", NOW_MS + ahead_ms)
+    assert then == pytest.approx(1.5 * 2.0 ** (-ahead_ms / 3_600_000) + 0.5 * 0.5 * people, rel=1e-12)

@@ -5,20 +5,25 @@ import shlex
 import time
 from collections.abc import Callable, Iterator, Sequence
 from pathlib import Path
-from typing import Annotated, Final
+from typing import TYPE_CHECKING, Annotated, Final
 
 import orjson
 import typer
 
 from service.cli.import_progress import Progress, shown_progress
+from service.cli.interrupt import Interrupts
 from service.cli.opening import STORE_SETTINGS, Opened, opened
 from service.cli.options import Json, with_settings
 from service.cli.output import print_json, print_table
 from service.errors import InvalidField
-from service.importing.archives import STDIN, check_readable
+from service.importing.archives import STDIN, Source, check_readable
 from service.importing.summary import SHOWN_REJECTED, Rejected, Stop, Summary, as_document, rate_per_s
 from service.settings import Settings
 from service.web import clock
+
+if TYPE_CHECKING:
+    from service.events.model import AnyEvent
+    from service.store.verdict import Verdict
 
 REJECTED: Final = 1
 _STOP_STATUS: Final = {"damaged": 1, "store": 2, "interrupted": 130}
@@ -77,13 +82,20 @@ def _import(store: Opened, files: Sequence[str], from_line: int, summary: Summar
     from service.importing.batch import Importer  # noqa: PLC0415  it loads what most commands do without
     from service.importing.run import import_files  # noqa: PLC0415  the same
 
-    importer = Importer(
-        apply=lambda events, now_ms: store.run(store.engine.apply(events, now_ms)),
-        now_ms=clock.now_ms,
-        pause=time.sleep,
-        summary=summary,
-    )
-    import_files(files, from_line, importer, lambda source: progress(source.name, source.consumed_bytes, summary))
+    def apply(events: "Sequence[AnyEvent]", now_ms: int) -> "list[Verdict]":
+        with interrupts.finishing():
+            return store.run(store.engine.apply(events, now_ms))
+
+    def on_batch(source: Source) -> None:
+        progress(source.name, source.consumed_bytes, summary)
+        interrupts.check()
+
+    def pause(seconds: float) -> None:
+        interrupts.check()
+        time.sleep(seconds)
+
+    with Interrupts() as interrupts:
+        import_files(files, from_line, Importer(apply, clock.now_ms, pause, summary), on_batch)
 
 
 @contextlib.contextmanager

@@ -30,6 +30,10 @@ local function note_time()
   end
   post.edits[#post.edits + 1] = event_ms
   table.sort(post.edits)
+  -- The first stands for the creation, the newest for what an erasure may leave.
+  if #post.edits > MOST_POST_EVENTS then
+    table.remove(post.edits, 2)
+  end
 end
 
 if once(KEYS[1], ARGV[1], tonumber(ARGV[2]), tonumber(ARGV[3])) then

@@ -8,6 +8,7 @@ local HEADER = '<BBBBHHHHHHHHddc8'
 local HEADER_SIZE = 44
 local WITHDRAWN, RECORDED = 1, 2
 local RAW_EDGES = 16
+local MOST_RAW_EDGES, MOST_POST_EVENTS = 1024, 256
 local NOBODY = string.rep('\0', 8)
 
 local function new_post()

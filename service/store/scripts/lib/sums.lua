@@ -28,7 +28,8 @@ local function fold_edge(post, stamp, sign, half_lives)
   kind[AS_OF] = math.max(as_of, ms)
 end
 
--- Edges stay in order of time; the newest RAW_EDGES and those ahead of the clock are kept as they are.
+-- Edges stay in order of time; the newest RAW_EDGES and those ahead of the clock are kept as they are. Past
+-- MOST_RAW_EDGES the clock is no longer waited for: until it has come, such an edge counts for a little more than 1.
 local function add_edge(post, stamp, now_ms, half_lives)
   local ms, edges = stamp_ms(stamp, 1), post.edges
   local before = #edges
@@ -36,7 +37,7 @@ local function add_edge(post, stamp, now_ms, half_lives)
     before = before - 8
   end
   edges = string.sub(edges, 1, before) .. stamp .. string.sub(edges, before + 1)
-  while #edges > 8 * RAW_EDGES and stamp_ms(edges, 1) <= now_ms do
+  while #edges > 8 * RAW_EDGES and (stamp_ms(edges, 1) <= now_ms or #edges > 8 * MOST_RAW_EDGES) do
     fold_edge(post, string.sub(edges, 1, 8), 1, half_lives)
     edges = string.sub(edges, 9)
   end
