@@ -7,13 +7,14 @@ not counted.
 """
 
 import argparse
-import asyncio
 import json
 import statistics
 import tempfile
 import time
 from pathlib import Path
 from typing import Any
+
+import uvloop
 
 from loadtests.reference import READER, Shape, events
 from scoring.bank import DEFAULT_BANK
@@ -86,7 +87,7 @@ def main() -> None:
     parser.add_argument("--json", action="store_true")
     options = parser.parse_args()
     with tempfile.TemporaryDirectory() as folder, EmbeddedServer(Path(folder) / "data") as server:
-        figures = asyncio.run(measure(server.url, Shape(ties=options.ties), options.reads))
+        figures = uvloop.run(measure(server.url, Shape(ties=options.ties), options.reads))
     if options.json:
         print(json.dumps(figures))
         return

@@ -1,12 +1,13 @@
 """A policy made ready to rank: weights and gains by kind code, the curve on the bank."""
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scoring.bank import Bank, BankFit, fit
+from scoring.compiled import Rule, numbers
 from scoring.curves import HalfLife
 from scoring.policy import Policy
 
@@ -29,6 +30,7 @@ class Ranking:
         fit: The curve on the bank.
         weights: Weight by kind code, shape (codes,).
         gains: Gain by kind code, shape (codes,).
+        rule: The same for the compiled passes.
     """
 
     policy: Policy
@@ -36,6 +38,31 @@ class Ranking:
     fit: BankFit
     weights: Values
     gains: Values
+    rule: Rule = field(init=False, repr=False, compare=False)
+    _packed: tuple[bytes, ...] = field(init=False, repr=False, compare=False)
+
+    def __post_init__(self) -> None:
+        packed = (numbers(self.weights), numbers(np.array(self.bank.half_lives_ms)), numbers(self.fit.coefficients))
+        object.__setattr__(self, "_packed", packed)
+        object.__setattr__(self, "rule", self._rule(*packed))
+
+    def _rule(self, weights: bytes, half_lives_ms: bytes, coefficients: bytes) -> Rule:
+        curve = self.policy.curve
+        scale_ms, exponent = (
+            (curve.half_life_ms, 1.0) if isinstance(curve, HalfLife) else (curve.scale_ms, curve.exponent)
+        )
+        return Rule(
+            power=not isinstance(curve, HalfLife),
+            exact=self.fit.exact,
+            scale_ms=scale_ms,
+            exponent=exponent,
+            stranger=self.policy.affinity.crowd,
+            codes=len(self.weights),
+            weights=weights,
+            terms=len(self.bank.half_lives_ms),
+            half_lives_ms=half_lives_ms,
+            coefficients=coefficients,
+        )
 
     def freshness(self, age_ms: Values) -> Values:
         """Return the policy's freshness at ages, of the same shape."""

@@ -21,9 +21,6 @@ from service.store.verdict import Verdict
 
 _POLICIES_EVERY_S = 1.0
 
-BYTES_A_POST = 2048
-"""About what a remembered post takes, bytes."""
-
 
 class Engine:
     """Takes events and ranks feeds.
@@ -58,7 +55,7 @@ class Engine:
         self._policies.prepared(None, [])
         self.store = Store(options, known=self._policies.knows, known_kinds=self._policies.known_kinds)
         self._budget_ms = budget_ms
-        self._cache = WorkerCache(row_bytes=cache_bytes, posts=cache_bytes // BYTES_A_POST)
+        self._cache = WorkerCache(row_bytes=cache_bytes, post_bytes=cache_bytes)
         self._watcher = Periodic("policies", self._load_policies, _POLICIES_EVERY_S, at_once=False)
 
     @classmethod
@@ -156,5 +153,5 @@ class Engine:
         await self.store.connection.read("PING")
 
     async def _load_policies(self) -> None:
-        stored = await self.store.connection.read("HGETALL", POLICIES)
+        stored = await self.store.connection.read_hash(POLICIES)
         self._policies.load_all({name.decode(): text.decode() for name, text in stored.items()})

@@ -10,30 +10,28 @@ from dataclasses import dataclass, field
 from typing import Any, cast
 
 import numpy as np
-from numpy.typing import NDArray
 
-from scoring.affinity import BLOCK, FOLLOW, NONE, Circle, Dealings
+from scoring.affinity import BLOCK, FOLLOW, NONE, Circle
+from scoring.gathering import Bounds, Gathering, Reader
+from scoring.noise import multipliers
 from scoring.ranking import Ranking
-from scoring.reduce import Candidates, reduce_edges
 from scoring.sums import DecayedSum
 from scoring.topk import tie_key
 from service.feed.board import BoardReader, CrowdBound
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
-from service.feed.readers import ReaderState
 from service.feed.reads import Reads
 from service.feed.shortlist import Shortlister
-from service.feed.visible import Gate
 from service.store import keys
 from service.store.connection import Connection
 from service.store.drive import AUDIENCES
 from tests.rankings import (
+    DAY_MS,
     HORIZON_MS,
     KINDS,
     NOW_MS,
     WEIGHTS,
     PlainEdge,
-    as_rows,
     followed,
     hashes,
     left_of,
@@ -93,27 +91,44 @@ class PlainPost:
 
 @dataclass
 class World:
-    """Posts, the affinity of each of the reader's ties, and the policy they are ranked with."""
+    """Posts, the affinity of each of the reader's ties, and the policy they are ranked with.
+
+    A post whose factor is not 1 was seen, and has the factor of all that were; `seed` and `temperature` make the noise.
+    """
 
     posts: list[PlainPost]
     affinity: list[float]
     ranking: Ranking
+    seen_factor: float = 0.5
+    seed: int = 0
+    temperature: float = 0.0
 
-    def candidates(self) -> Candidates:
-        """Reduce the circle's edges with the code under test."""
+    def make_noise(self, seed: int, temperature: float) -> None:
+        """Draw each post's noise."""
+        self.seed, self.temperature = seed, temperature
+        drawn = multipliers(seed, hashes([post.number for post in self.posts]), temperature).tolist()
+        for post, noise in zip(self.posts, drawn, strict=True):
+            post.noise = noise
+
+    def gathering(self, bound: CrowdBound | None) -> Gathering:
+        """Gather the circle's edges with the code under test, bounded; None takes them by their newest edges."""
+        gathering = Gathering(self.ranking, NOW_MS)
         people = len(self.affinity)
         relation = np.full(people, FOLLOW, dtype=np.uint8)
         rows: list[list[PlainEdge]] = [[] for _ in range(people)]
         for post in self.posts:
             for place, edge in post.tied:
                 rows[place].append(edge)
-        circle = Circle(hashes(list(range(people))), relation, np.array(self.affinity))
-        return reduce_edges(as_rows(rows), circle, self.ranking, NOW_MS)
-
-    def column(self, candidates: Candidates, name: str) -> NDArray[np.float64]:
-        """Give each candidate's factor or noise."""
-        by_number = {post.number: getattr(post, name) for post in self.posts}
-        return np.array([by_number[number] for number in candidates.post.tolist()], dtype=np.float64)
+        packed = [b"".join(edge.packed() for edge in row) for row in rows]
+        gathering.add(packed, np.array(self.affinity), relation)
+        if bound is None:
+            gathering.by_newest()
+        else:
+            seen = [post.number for post in self.posts if post.factor != 1.0]
+            later = np.full(len(seen), float(NOW_MS + DAY_MS))
+            crowd = (bound.others, bound.post, bound.bound)
+            gathering.bound(Bounds(*crowd, hashes(seen), later, self.seen_factor, self.seed, self.temperature))
+        return gathering
 
     def crowd(self, post: PlainPost) -> float:
         """Sum every edge of a post by loops."""
@@ -198,32 +213,21 @@ class Patience(Deadline):
         patience.looks = looks
         return patience
 
-    def passed(self) -> bool:
+    def passed(self, share: float = 1.0) -> bool:  # noqa: ARG002  patience has no shares
         """Say whether it has been looked at too often."""
         self.looks -= 1
         return self.looks < 0
 
 
-def gate() -> Gate:
+def reader() -> Reader:
     """Let a reader see what everyone may, but nothing by the author blocked."""
-    nothing, never = hashes([]), np.empty(0, dtype=np.float64)
-    dealings = Dealings(nothing, np.empty(0, dtype=np.intp), never)
-    state = ReaderState(
-        hash=READER.to_bytes(8, "little"),
-        row=b"",
-        tie_person=hashes([BLOCKED, AUTHOR]),
-        tie_relation=np.array([BLOCK, NONE], dtype=np.uint8),
-        blocked_by=frozenset(),
-        friend_of=frozenset(),
-        dealings=dealings,
-        dealt_post=nothing,
-        seen_post=nothing,
-        seen_ms=never,
-    )
-    return Gate(state)
+    person, relation = hashes([AUTHOR, BLOCKED]), np.array([NONE, BLOCK], dtype=np.uint8)
+    return Reader(READER, Circle(person, relation, np.zeros(2)), b"")
 
 
-def shortlister(world: World, *, looks: float = math.inf) -> tuple[Shortlister, FakeConnection]:
+def shortlister(
+    world: World, bound: CrowdBound | None, *, looks: float = math.inf
+) -> tuple[Shortlister, FakeConnection]:
     """Make a shortlister over a world's posts, and give what it asks the store for."""
     half_lives_ms = world.ranking.bank.half_lives_ms
     values = {
@@ -232,14 +236,15 @@ def shortlister(world: World, *, looks: float = math.inf) -> tuple[Shortlister, 
         if post.flags
     }
     connection = FakeConnection(values)
-    reads = Reads(cast("Connection", connection), WorkerCache(0, 10_000))
-    return Shortlister(reads, gate(), world.ranking, NOW_MS, Patience.of(looks)), connection
+    reads = Reads(cast("Connection", connection), WorkerCache(0, 1 << 20))
+    return Shortlister(reads, reader(), world.gathering(bound), Patience.of(looks)), connection
 
 
 def random_world(rng: random.Random, ranking: Ranking, count: int) -> World:
     """Draw a world: few ties, many equal scores, crowds of any size, posts that may not be seen."""
     people = rng.randrange(1, 5)
-    world = World([], [rng.choice([0.02, 1.0, 1.0, 2.0, 10.0]) for _ in range(people)], ranking)
+    affinity = [rng.choice([0.02, 1.0, 1.0, 2.0, 10.0]) for _ in range(people)]
+    world = World([], affinity, ranking, seen_factor=rng.choice([0.5, 0.0]))
     numbers = [rng.getrandbits(64) for _ in range(count)]
     popular = rng.choice([0.0, 0.1, 0.6])
     for place, number in enumerate(numbers):
@@ -251,6 +256,6 @@ def random_world(rng: random.Random, ranking: Ranking, count: int) -> World:
         post.folded = rng.randrange(sum(edge.at_ms <= NOW_MS for edge in post.edges) + 1)
         if rng.random() < 0.1:
             post.author, post.audience, post.flags = rng.choice(HIDDEN)
-        post.factor = rng.choice([1.0, 1.0, 1.0, 0.5, 0.0])
+        post.factor = rng.choice([1.0, 1.0, 1.0, world.seen_factor])
         world.posts.append(post)
     return world

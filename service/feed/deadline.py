@@ -22,9 +22,9 @@ class Deadline:
     def __post_init__(self) -> None:
         self._mark_s = time.perf_counter()
 
-    def passed(self) -> bool:
-        """Say whether the budget is used up."""
-        return (time.perf_counter() - self.arrived_s) * 1000 >= self.budget_ms
+    def passed(self, share: float = 1.0) -> bool:
+        """Say whether the budget, or a share of it, is used up."""
+        return (time.perf_counter() - self.arrived_s) * 1000 >= share * self.budget_ms
 
     def stage(self, name: str) -> None:
         """Book the time since the last stage under a name."""

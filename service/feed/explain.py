@@ -11,7 +11,7 @@ from service.feed.deadline import Deadline
 from service.feed.policies import PolicyBook
 from service.feed.ranker import Ranker, View
 from service.feed.readers import hash_number
-from service.feed.shortlist import crowd_sums
+from service.feed.sums import crowd_sums
 from service.feed.types import CrowdPart, ExplainRequest, Explanation, Factor, TiePart
 from service.feed.visible import Gate
 from service.store import keys
@@ -51,12 +51,13 @@ class Explainer:
         t_ms = now_ms if request.as_of_ms is None else max(request.as_of_ms, now_ms)
         policy = request.policy or self._policies.default
         deadline = Deadline(_ALL_THE_TIME_MS, time.perf_counter())
-        view = await self._ranker.view(request.reader, policy, t_ms, deadline, profile=True)
+        view, _ = await self._ranker.view(request.reader, policy, t_ms, deadline, profile=True)
         post = self._store.hasher.hash(request.post)
-        record = (await self._ranker.reads.posts([post]))[0]
+        record = (await self._ranker.reads.records([post]))[0]
         if record is None or record.id != request.post or not Gate(view.reader).lets_through(record):
             raise NotFound("this reader may not see this post, or there is no such post")
-        edges = view.edges.select(view.edges.post == np.uint64(hash_number(post)))
+        edges = view.edges()
+        edges = edges.select(edges.post == np.uint64(hash_number(post)))
         ties, share = await self._parts(view, edges, t_ms)
         crowd = self._crowd(view, record, share, t_ms)
         factor = _seen_factor(view, edges, hash_number(post))

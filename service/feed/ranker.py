@@ -1,42 +1,48 @@
 """A feed read: the reader's state, the circle's rows, the reduction, the look-ups, the page."""
 
 from collections.abc import Awaitable, Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
-from scoring.affinity import Circle, Dealings, circle
+from scoring.affinity import Circle
 from scoring.arrange import keep_apart
-from scoring.edges import EdgeRows, erasures, live
-from scoring.noise import multipliers
+from scoring.edges import EdgeRows, erasures, join_rows, live
+from scoring.gathering import Bounds, Gathering, Reader
 from scoring.ranking import Ranking, UnknownCodeError
-from scoring.reduce import Candidates, places_in, reduce_edges
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
 from service.feed.pages import CursorBook, Session, new_session
 from service.feed.policies import PolicyBook, PreparedPolicy
-from service.feed.readers import ReaderState, hash_number, load_reader, load_rows
+from service.feed.readers import Readers, ReaderState, Standing, hash_number
 from service.feed.reads import Reads
 from service.feed.shortlist import Found, Shortlist, Shortlister
 from service.feed.types import FeedAnswer, FeedItem, FeedRequest
-from service.feed.visible import Gate
+from service.store.records import author_of, read_item
 from service.store.store import Store
 
 Answer = TypeVar("Answer")
+
+
+ROWS_AT_ONCE = 500
+"""Rows fetched and added up between two looks at the deadline."""
+
+ROWS_SHARE = 0.7
+"""How much of the budget fetching rows may use up: the rest is for looking up the best."""
 
 
 @dataclass(frozen=True, slots=True)
 class View:
     """All that a reader's feed is ranked from.
 
-    `whole` is False where the deadline passed before all rows were fetched.
+    `rows` are those of the first people of the standing; `whole` is False where the deadline passed before all came.
     """
 
     reader: ReaderState
-    circle: Circle
-    edges: EdgeRows
+    standing: Standing
+    rows: list[bytes]
     prepared: PreparedPolicy
     whole: bool
 
@@ -44,6 +50,16 @@ class View:
     def ranking(self) -> Ranking:
         """The compiled policy."""
         return self.prepared.ranking
+
+    @property
+    def circle(self) -> Circle:
+        """The reader's circle."""
+        return self.standing.circle
+
+    def edges(self) -> EdgeRows:
+        """Decode the edges that count; `row` is the place of the actor in the circle."""
+        joined = join_rows(self.rows)
+        return live(EdgeRows(joined.post, joined.stamp, self.standing.order[joined.row]))
 
 
 class Ranker:
@@ -62,6 +78,7 @@ class Ranker:
         self._policies = policies
         self._budget_ms = budget_ms
         self.reads = Reads(store.connection, cache)
+        self._readers = Readers(self.reads, cache.size)
         self._cursors = CursorBook(store.connection, store.meta[b"hash_key"])
 
     async def feed(self, request: FeedRequest, now_ms: int, arrived_s: float) -> FeedAnswer:
@@ -95,12 +112,16 @@ class Ranker:
         self, request: FeedRequest, session: Session, served: list[bytes], deadline: Deadline
     ) -> FeedAnswer:
         profile = session.order == "ranked"
-        view = await self.view(request.reader, session.policy, session.as_of_ms, deadline, profile=profile)
-        candidates = reduce_edges(view.edges, view.circle, view.ranking, session.as_of_ms)
-        deadline.stage("reduce")
+        view, gathering = await self.view(request.reader, session.policy, session.as_of_ms, deadline, profile=profile)
         before, again = served[: session.offset], served[session.offset : session.offset + request.k]
-        candidates = _narrowed(candidates, before, again)
-        chosen, certain, more = await self._choose(request, session, view, candidates, before, deadline)
+        await self._bound(session, view, gathering)
+        if again:
+            gathering.only(again)
+        elif before:
+            gathering.without(before)
+        reader = Reader(hash_number(view.reader.hash), view.circle, view.reader.marks)
+        shortlister = Shortlister(self.reads, reader, gathering, deadline)
+        chosen, certain, more = await self._choose(request, session, view.ranking, shortlister, before)
         if again:
             places = {post: place for place, post in enumerate(again)}
             chosen.sort(key=lambda one: places[one.hash])
@@ -117,7 +138,9 @@ class Ranker:
             stages_ms=deadline.stages_ms,
         )
 
-    async def view(self, reader: str, policy: str, t_ms: int, deadline: Deadline, *, profile: bool) -> View:
+    async def view(
+        self, reader: str, policy: str, t_ms: int, deadline: Deadline, *, profile: bool
+    ) -> tuple[View, Gathering]:
         """Gather what a reader's feed is ranked from.
 
         Args:
@@ -127,24 +150,38 @@ class Ranker:
             deadline: ends the fetching of rows.
             profile: False leaves out what the reader did.
 
+        Returns:
+            What was fetched, and the candidates gathered from it.
+
         Raises:
             UnknownPolicy: the policy is not loaded.
             StoreUnavailable: the store does not answer.
 
         """
-        state = await load_reader(self.reads, reader, self._store.hasher.hash(reader), profile=profile)
+        state = await self._readers.load(reader, self._store.hasher.hash(reader), profile=profile)
         deadline.stage("reader")
         prepared = self._policies.prepared(policy, self._store.kinds.names)
-        known = _circle(state, state.dealings, prepared.ranking, t_ms)
-        rows, whole = await load_rows(self.reads, known, deadline)
+        standing = self._readers.standing(state, prepared.ranking, t_ms)
+        gathering = Gathering(prepared.ranking, t_ms)
+        rows = await self._rows(standing, gathering, deadline)
+        view = View(state, standing, rows, prepared, len(rows) == len(standing.people))
+        _, _, markers = gathering.counts()
+        if markers:
+            view, gathering = await self._without_erased(view, gathering, t_ms)
         deadline.stage("rows")
-        edges = live(rows)
-        erased = {int(known.person[row]): until_ms for row, until_ms in erasures(rows).items()}
-        erased.pop(hash_number(state.hash), None)
-        if erased and np.isin(state.dealings.author, list(erased)).any():
-            dealings = await self._without_erased(state, erased)
-            known = _circle(state, dealings, prepared.ranking, t_ms, keep=known)
-        return View(state, known, edges, prepared, whole)
+        return view, gathering
+
+    async def _rows(self, standing: Standing, gathering: Gathering, deadline: Deadline) -> list[bytes]:
+        """Fetch and add up the rows of the circle, the strongest first, as many as the deadline allows."""
+        fetched: list[bytes] = []
+        for at in range(0, len(standing.people), ROWS_AT_ONCE):
+            if at and deadline.passed(ROWS_SHARE):
+                break
+            part = slice(at, at + ROWS_AT_ONCE)
+            rows = await self.reads.rows(standing.people[part])
+            gathering.add(rows, standing.affinity[part], standing.relation[part])
+            fetched += rows
+        return fetched
 
     async def _session(self, request: FeedRequest, now_ms: int) -> tuple[Session, list[bytes]]:
         if request.cursor is not None:
@@ -153,42 +190,54 @@ class Ranker:
         as_of_ms = now_ms if request.as_of_ms is None else max(request.as_of_ms, now_ms)
         return new_session(request, as_of_ms, request.policy or self._policies.default), []
 
+    async def _bound(self, session: Session, view: View, gathering: Gathering) -> None:
+        """Bound what the candidates stand in order by."""
+        if session.order == "newest":
+            gathering.by_newest()
+            return
+        board = view.prepared.board
+        crowd = board.bound(*await self.reads.board(board, session.as_of_ms), session.as_of_ms)
+        policy = view.ranking.policy
+        gathering.bound(
+            Bounds(
+                others=crowd.others,
+                post=crowd.post,
+                crowd=crowd.bound,
+                seen_post=view.reader.seen_post,
+                seen_ms=view.reader.seen_ms,
+                factor=policy.seen_factor,
+                seed=session.seed,
+                temperature=policy.temperature if session.explore else 0.0,
+            )
+        )
+
     async def _choose(
         self,
         request: FeedRequest,
         session: Session,
-        view: View,
-        candidates: Candidates,
+        ranking: Ranking,
+        shortlister: Shortlister,
         before: list[bytes],
-        deadline: Deadline,
     ) -> tuple[list[Found], bool, bool]:
         """Choose a page's posts; say whether they are certain, and whether more may follow."""
-        shortlister = Shortlister(self.reads, Gate(view.reader), view.ranking, session.as_of_ms, deadline)
         if session.order == "newest":
-            shortlist = await shortlister.newest(candidates)
-            more = len(shortlist.found) > request.k or not shortlist.exhausted
-            return shortlist.found[: request.k], shortlist.exhausted, more
-        factors = _seen_factors(view, candidates)
-        temperature = view.ranking.policy.temperature if session.explore else 0.0
-        noise = multipliers(session.seed, candidates.post, temperature)
-        board = view.prepared.board
-        bound = board.bound(*await self.reads.board(board, session.as_of_ms), session.as_of_ms)
-        recent = await self._recent_authors(view.ranking.policy.author_gap, before)
-        need = request.k
+            shortlist = await shortlister.newest(request.k)
+            return shortlist.found, shortlist.exhausted, shortlist.more
+        gap, need = ranking.policy.author_gap, request.k
+        recent = await self._recent_authors(gap, before)
         while True:
-            shortlist = await shortlister.best(candidates, factors, noise, bound, need)
-            picked = _arrange(shortlist, view.ranking.policy.author_gap, request.k, recent)
-            if picked is not None or deadline.passed():
+            shortlist = await shortlister.best(need)
+            picked = _arrange(shortlist, gap, request.k, recent)
+            if picked is not None or shortlist.certain < need:
                 break
             need *= 2
-        certain = picked is not None
-        chosen = picked if picked is not None else shortlist.found[: request.k]
-        return chosen, certain, len(shortlist.found) > len(chosen) or not shortlist.exhausted
+        chosen = shortlist.found[: request.k] if picked is None else picked
+        return chosen, picked is not None, not shortlist.exhausted or shortlist.total > len(chosen)
 
     async def _recent_authors(self, gap: int, before: list[bytes]) -> list[bytes]:
         if not gap or not before:
             return []
-        records = await self.reads.posts(before[-gap:])
+        records = await self.reads.records(before[-gap:])
         return [record.author_hash if record else b"" for record in records]
 
     async def _next(
@@ -202,61 +251,46 @@ class Ranker:
             await self._cursors.keep(session, served[: session.offset] + page)
         return self._cursors.write(session, request.reader, end)
 
-    async def _without_erased(self, state: ReaderState, erased: dict[int, int]) -> Dealings:
-        """Leave out dealings with people since erased: those up to then, and those with posts that went."""
-        dealings = state.dealings
+    async def _without_erased(self, view: View, gathering: Gathering, t_ms: int) -> tuple[View, Gathering]:
+        """Gather anew without the reader's dealings with people since erased, where there are any."""
+        order = view.standing.order
+        erased = {
+            int(view.circle.person[order[row]]): until_ms for row, until_ms in erasures(join_rows(view.rows)).items()
+        }
+        erased.pop(hash_number(view.reader.hash), None)
+        if not erased or not np.isin(view.reader.known.dealings.author, list(erased)).any():
+            return view, gathering
+        kept = await self._kept_dealings(view.reader, erased)
+        affinity = view.reader.known.only(kept).affinity(view.ranking, t_ms)
+        circle = Circle(view.circle.person, view.circle.relation, affinity)
+        standing = replace(view.standing, affinity=affinity[order], circle=circle)
+        gathering, rows = Gathering(view.ranking, t_ms), len(view.rows)
+        gathering.add(view.rows, standing.affinity[:rows], standing.relation[:rows])
+        return replace(view, standing=standing), gathering
+
+    async def _kept_dealings(self, state: ReaderState, erased: dict[int, int]) -> NDArray[np.bool_]:
+        """Say which dealings count still: none up to an erasure, and none with posts that went with it."""
+        dealings = state.known.dealings
         until_ms = np.array([erased.get(author, -1) for author in dealings.author.tolist()])
-        kept = dealings.time_ms > until_ms
+        kept: NDArray[np.bool_] = dealings.time_ms > until_ms
         doubtful = np.flatnonzero(kept & (until_ms >= 0))
         posts = [int(state.dealt_post[at]).to_bytes(8, "little") for at in doubtful]
-        records = await self.reads.posts(posts)
+        records = await self.reads.records(posts)
         for at, record in zip(doubtful, records, strict=True):
             kept[at] = record is not None and hash_number(record.author_hash) == int(dealings.author[at])
-        return Dealings(dealings.author[kept], dealings.code[kept], dealings.time_ms[kept])
-
-
-def _circle(state: ReaderState, dealings: Dealings, ranking: Ranking, t_ms: int, keep: Circle | None = None) -> Circle:
-    """Compute the circle; with `keep`, on the same people as an earlier one, so that rows keep their places."""
-    known = circle(hash_number(state.hash), state.tie_person, state.tie_relation, dealings, ranking, t_ms)
-    if keep is None:
-        return known
-    affinity = np.full(len(keep.person), ranking.policy.affinity.crowd)
-    affinity[np.searchsorted(keep.person, known.person)] = known.affinity
-    return Circle(keep.person, keep.relation, affinity)
-
-
-def _narrowed(candidates: Candidates, before: list[bytes], again: list[bytes]) -> Candidates:
-    """Leave out the posts of the pages before; keep only those of a page that was served already."""
-    if not before and not again:
-        return candidates
-    kept: NDArray[np.bool_]
-    if again:
-        kept = np.isin(candidates.post, np.frombuffer(b"".join(again), dtype="<u8"))
-    else:
-        kept = ~np.isin(candidates.post, np.frombuffer(b"".join(before), dtype="<u8"))
-    return Candidates(candidates.post[kept], candidates.known[kept], candidates.share[kept], candidates.newest_ms[kept])
-
-
-def _seen_factors(view: View, candidates: Candidates) -> NDArray[np.float64]:
-    """Give the factor of each candidate: the policy's where the post was seen and no tie has added an edge since."""
-    factors, factor = np.ones(len(candidates.post)), view.ranking.policy.seen_factor
-    seen = view.reader.seen_post
-    if factor == 1.0 or not len(seen):
-        return factors
-    place, found = places_in(candidates.post, seen)
-    unrenewed = candidates.newest_ms[place] <= view.reader.seen_ms[found]
-    factors[place[unrenewed]] = factor
-    return factors
+        return kept
 
 
 def _arrange(shortlist: Shortlist, gap: int, k: int, recent: list[bytes]) -> list[Found] | None:
     """Arrange the certain posts into a page; None where more must be looked up first."""
     sure = shortlist.found[: shortlist.certain]
-    more = not shortlist.exhausted
-    places = keep_apart([one.record.author_hash for one in sure], gap, k, recent, more=more)
+    if not gap:
+        return sure[:k] if len(sure) >= k or shortlist.exhausted else None
+    authors = [author_of(one.value) for one in sure]
+    places = keep_apart(authors, gap, k, recent, more=shortlist.more)
     return None if places is None else [sure[place] for place in places]
 
 
 def _item(one: Found, session: Session) -> FeedItem:
-    score = one.score if session.order == "ranked" else None
-    return FeedItem(one.record.id, one.record.author, one.record.form, one.record.posted_ms, score)
+    post, author, form, posted_ms = read_item(one.value)
+    return FeedItem(post, author, form, posted_ms, one.score if session.order == "ranked" else None)

@@ -2,16 +2,13 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import cast
 
 from service.feed.board import BoardReader, BoardState
-from service.feed.cache import Watch, WorkerCache
-from service.feed.deadline import Deadline
+from service.feed.cache import Recent, Watch, WorkerCache
 from service.store import keys
 from service.store.connection import Connection
 from service.store.records import PostRecord, read_record
-
-ROWS_AT_ONCE = 1000
-"""Rows fetched between two looks at the deadline."""
 
 _BOARD_AGE_MS = 1000
 _BOARD_CHANGES = 2000
@@ -22,6 +19,19 @@ class _HeldBoard:
     state: BoardState
     watch: Watch
     fetched_ms: int
+
+
+def _present(values: list[bytes | None]) -> list[bytes]:
+    """Put an empty value in place of each that is not there."""
+    return [value or b"" for value in values] if None in values else cast("list[bytes]", values)
+
+
+def _filled(values: list[bytes | None], fetched: list[bytes]) -> list[bytes]:
+    """Put what was fetched in place of what was not remembered, in order."""
+    if len(fetched) == len(values):
+        return fetched
+    coming = iter(fetched)
+    return [next(coming) if value is None else value for value in values]
 
 
 class Reads:
@@ -51,50 +61,42 @@ class Reads:
         self._cache.take(asked_at, answers[1:])
         return [value or b"" for value in answers[0]]
 
-    async def rows(self, people: Sequence[bytes], deadline: Deadline) -> tuple[list[bytes], bool]:
-        """Give the rows of people, as many as the deadline allows.
-
-        Returns:
-            One row for each of the first people, and whether that is all of them.
+    async def rows(self, people: Sequence[bytes]) -> list[bytes]:
+        """Give the row of each person, empty where there is none.
 
         Raises:
             StoreUnavailable: the store does not answer.
 
         """
-        remembered = self._cache.rows.get
-        rows = [remembered(person) for person in people]
-        missing = [place for place, row in enumerate(rows) if row is None]
-        for at in range(0, len(missing), ROWS_AT_ONCE):
-            if at and deadline.passed():
-                break
-            places = missing[at : at + ROWS_AT_ONCE]
-            wanted = [people[place] for place in places]
-            ticket = self._cache.follower.ticket()
-            values = [value or b"" for value in await self._connection.mget(keys.keys("row", wanted))]
-            self._cache.keep_rows(ticket, zip(wanted, values, strict=True))
-            for place, value in zip(places, values, strict=True):
-                rows[place] = value
-        whole = all(row is not None for row in rows)
-        return [row or b"" for row in rows], whole
+        return await self._values("row", self._cache.rows, people)
 
-    async def posts(self, posts: Sequence[bytes]) -> list[PostRecord | None]:
-        """Give the records of posts, None where there is none.
+    async def posts(self, posts: Sequence[bytes]) -> list[bytes]:
+        """Give the value of each post, empty where there is none.
 
         Raises:
             StoreUnavailable: the store does not answer.
 
         """
-        records: list[PostRecord | None] = [self._cache.posts.get(post) for post in posts]
-        missing = [place for place, record in enumerate(records) if record is None]
-        if missing:
-            wanted = [posts[place] for place in missing]
-            ticket = self._cache.follower.ticket()
-            values = await self._connection.mget(keys.keys("post", wanted))
-            found = [read_record(value) if value else None for value in values]
-            self._cache.keep_posts(ticket, ((post, one) for post, one in zip(wanted, found, strict=True) if one))
-            for place, record in zip(missing, found, strict=True):
-                records[place] = record
-        return records
+        return await self._values("post", self._cache.posts, posts)
+
+    async def records(self, posts: Sequence[bytes]) -> list[PostRecord | None]:
+        """Give the record of each post, None where there is none.
+
+        Raises:
+            StoreUnavailable: the store does not answer.
+
+        """
+        return [read_record(value) if value else None for value in await self.posts(posts)]
+
+    async def _values(self, name: str, remembered: Recent[bytes], wanted: Sequence[bytes]) -> list[bytes]:
+        values = remembered.get_all(wanted)
+        if None not in values:
+            return cast("list[bytes]", values)
+        hashes = [one for one, value in zip(wanted, values, strict=True) if value is None]
+        ticket = self._cache.follower.ticket()
+        fetched = _present(await self._connection.mget(keys.keys(name, hashes)))
+        self._cache.keep(remembered, ticket, zip(hashes, fetched, strict=True))
+        return _filled(values, fetched)
 
     async def board(self, reader: BoardReader, now_ms: int) -> tuple[BoardState, set[bytes]]:
         """Give a board as it was at most a second ago, and the posts that have changed since.

@@ -2,33 +2,25 @@
 
 from dataclasses import dataclass, field
 
-import numpy as np
-from numpy.typing import NDArray
-
-from scoring.crowd import raw_sums, running_sums
-from scoring.ranking import Ranking
-from scoring.reduce import Candidates, remainder
-from scoring.topk import ByBound, kth_greatest, order_key, settled
-from service.feed.board import CrowdBound
+from scoring.gathering import Gathering, Reader
+from scoring.topk import settled
 from service.feed.deadline import Deadline
 from service.feed.reads import Reads
-from service.feed.visible import Gate
-from service.store.kinds import CODE_MASK
-from service.store.records import PostRecord, crowd_state
 
 FIRST_BATCH = 48
-NEWEST_BATCH = 2000
+MOST_AT_ONCE = 2000
 
 
 @dataclass(frozen=True, slots=True)
 class Found:
     """A post that the reader may see.
 
-    `score` is the contract's, seen factor included; `order` is what it stands in order by, with randomness.
+    `value` is as stored. `score` is the contract's, seen factor included; `order` is what it stands in order by, with
+    randomness.
     """
 
     hash: bytes
-    record: PostRecord
+    value: bytes
     score: float
     order: float
 
@@ -38,59 +30,48 @@ class Shortlist:
     """What was found.
 
     Attributes:
-        found: visible posts, the best first.
-        certain: how many of them, from the front, are certainly the best there are.
+        found: visible posts, the best first; not all where more were found than asked for.
+        certain: how many posts, from the front, are certainly the best there are.
         exhausted: whether every candidate was looked up.
+        total: how many visible posts were found.
 
     """
 
     found: list[Found] = field(default_factory=list)
     certain: int = 0
     exhausted: bool = False
+    total: int = 0
 
-
-def crowd_sums(records: list[PostRecord], ranking: Ranking, t_ms: int) -> NDArray[np.float64]:
-    """Compute the weighted, decayed sum over every edge of each post, shape (n,)."""
-    state = crowd_state(records, len(ranking.bank.half_lives_ms))
-    raw = raw_sums(state.edge_post, state.edge_stamp, len(records), ranking, t_ms)
-    kinds = (state.kind_code & CODE_MASK).astype(np.intp)
-    return raw + running_sums(state.kind_post, kinds, state.kind_as_of_ms, state.kind_sums, len(records), ranking, t_ms)
+    @property
+    def more(self) -> bool:
+        """Whether there may be posts beyond the list."""
+        return not self.exhausted or self.total > len(self.found)
 
 
 class Shortlister:
-    """Looks up one feed's candidates.
+    """Looks up one feed's candidates; what it has found it keeps, so that more can be asked for.
 
     Args:
         reads: fetches for this worker.
-        gate: says which posts the reader may see.
-        ranking: the compiled policy.
-        t_ms: the time of the feed, Unix milliseconds.
+        reader: who reads.
+        gathering: the candidates, bounded.
         deadline: ends the work.
 
     """
 
-    def __init__(self, reads: Reads, gate: Gate, ranking: Ranking, t_ms: int, deadline: Deadline) -> None:
+    def __init__(self, reads: Reads, reader: Reader, gathering: Gathering, deadline: Deadline) -> None:
         self._reads = reads
-        self._gate = gate
-        self._ranking = ranking
-        self._t_ms = t_ms
+        self._reader = reader
+        self._gathering = gathering
         self._deadline = deadline
+        self._posts: list[bytes] = []
+        self._values: list[bytes] = []
+        self._batch = 0
 
-    async def best(
-        self,
-        candidates: Candidates,
-        factors: NDArray[np.float64],
-        noise: NDArray[np.float64],
-        bound: CrowdBound,
-        need: int,
-    ) -> Shortlist:
-        """Find the best candidates by score.
+    async def best(self, need: int) -> Shortlist:
+        """Find the best candidates by what they stand in order by.
 
         Args:
-            candidates: n posts.
-            factors: what each score is multiplied by, shape (n,).
-            noise: what its place in the order is multiplied by besides, shape (n,).
-            bound: of the crowd's sums.
             need: how many posts are wanted.
 
         Returns:
@@ -100,62 +81,43 @@ class Shortlister:
             StoreUnavailable: the store does not answer.
 
         """
-        stranger = self._ranking.policy.affinity.crowd
-        most = remainder(bound.of(candidates.post), candidates.share) if stranger else np.zeros(len(candidates.post))
-        reach = (candidates.known + stranger * most) * noise
-        bounds = np.where(factors > 0.0, reach, 0.0) * factors
-        batch = max(FIRST_BATCH, need + 16)
-        order = ByBound(bounds, 4 * batch)
-        shortlist, at = Shortlist(), 0
-        while at < len(order) and not self._enough(shortlist, need, order.bound(at)):
-            if at and self._deadline.passed():
+        self._batch = max(self._batch, FIRST_BATCH, need + 16)
+        next_bound = self._gathering.next_bound()
+        while next_bound >= 0.0 and not self._enough(need, next_bound):
+            if self._posts and self._deadline.passed():
                 break
-            chosen = order.take(at, batch)
-            shortlist.found += await self._look_up(candidates, factors, noise, chosen)
-            at, batch = at + len(chosen), min(2 * batch, NEWEST_BATCH)
-        shortlist.exhausted = at >= len(order)
-        shortlist.found.sort(key=lambda one: order_key(one.order, one.record.posted_ms, one.record.id))
-        next_bound = 0.0 if shortlist.exhausted else order.bound(at)
-        shortlist.certain = (
-            len(shortlist.found)
-            if shortlist.exhausted
-            else sum(settled(one.order, next_bound) for one in shortlist.found)
-        )
-        return shortlist
+            await self._look_up(self._batch)
+            self._batch = min(2 * self._batch, MOST_AT_ONCE)
+            next_bound = self._gathering.next_bound()
+        self._gathering.rank()
+        exhausted = next_bound < 0.0
+        found, total = self._found(need), self._gathering.found_count()
+        return Shortlist(found, total if exhausted else self._gathering.certain(next_bound), exhausted, total)
 
-    async def newest(self, candidates: Candidates) -> Shortlist:
+    async def newest(self, need: int) -> Shortlist:
         """Find the candidates posted last: every one is looked up, those with the newest edges first."""
-        shortlist, order = Shortlist(), ByBound(candidates.newest_ms, NEWEST_BATCH)
-        ones, at = np.ones(len(order)), 0
-        while at < len(order) and not (at and self._deadline.passed()):
-            chosen = order.take(at, NEWEST_BATCH)
-            shortlist.found += await self._look_up(candidates, ones, ones, chosen)
-            at += len(chosen)
-        shortlist.found.sort(key=lambda one: (-one.record.posted_ms, one.record.id.encode()))
-        shortlist.exhausted = at >= len(order)
-        shortlist.certain = len(shortlist.found) if shortlist.exhausted else 0
-        return shortlist
+        while self._gathering.next_bound() >= 0.0 and not (self._posts and self._deadline.passed()):
+            await self._look_up(MOST_AT_ONCE)
+        self._gathering.rank(newest=True)
+        exhausted = self._gathering.next_bound() < 0.0
+        found, total = self._found(need), self._gathering.found_count()
+        return Shortlist(found, total if exhausted else 0, exhausted, total)
 
-    def _enough(self, shortlist: Shortlist, need: int, next_bound: float) -> bool:
-        return settled(kth_greatest([one.order for one in shortlist.found], need), next_bound)
+    def _enough(self, need: int, next_bound: float) -> bool:
+        """Say whether no candidate left can reach the least of so many; puts what was found in order."""
+        self._gathering.rank()
+        best = self._gathering.found(need)
+        return len(best) == need and settled(best[-1][2], next_bound)
 
-    async def _look_up(
-        self,
-        candidates: Candidates,
-        factors: NDArray[np.float64],
-        noise: NDArray[np.float64],
-        chosen: NDArray[np.intp],
-    ) -> list[Found]:
-        packed = candidates.post[chosen].astype("<u8").tobytes()
-        hashes = [packed[at : at + 8] for at in range(0, len(packed), 8)]
-        looked_up = zip(chosen.tolist(), hashes, await self._reads.posts(hashes), strict=True)
-        shown = [(place, post, record) for place, post, record in looked_up if self._gate.lets_through(record)]
-        records = [record for _, _, record in shown if record is not None]
-        places = np.array([place for place, _, _ in shown], dtype=np.intp)
-        left = remainder(crowd_sums(records, self._ranking, self._t_ms), candidates.share[places])
-        scores = (candidates.known[places] + self._ranking.policy.affinity.crowd * left) * factors[places]
-        orders = scores * noise[places]
+    def _found(self, need: int) -> list[Found]:
         return [
-            Found(post, record, score, order)
-            for (_, post, _), record, score, order in zip(shown, records, scores.tolist(), orders.tolist(), strict=True)
+            Found(self._posts[nth], self._values[nth], score, order)
+            for nth, score, order in self._gathering.found(need)
         ]
+
+    async def _look_up(self, count: int) -> None:
+        posts = self._gathering.take(count)
+        values = await self._reads.posts(posts)
+        self._gathering.judge(posts, values, self._reader)
+        self._posts += posts
+        self._values += values

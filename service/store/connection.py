@@ -12,26 +12,29 @@ from redis.exceptions import NoScriptError, RedisError, ResponseError
 
 from service.errors import StoreUnavailable
 from service.store.calls import Argument, Call
+from service.store.line import Line
 from service.store.scripts import load, names
 
 _POOL_WAIT_S = 1.0
+_FAILURES = (TimeoutError, RedisError, OSError)
 
 
 class Connection:
-    """Two pools to one server: one for reads, whose waits are short, one for writes.
+    """To one server: one line that all reads share, whose waits are short, and a pool of connections for writes.
 
-    Neither retries: a read has a budget, and a write that was cut off is settled by sending its events again.
+    Neither tries again: a read has a budget, and a write that was cut off is settled by sending its events again.
 
     Args:
         url: redis://, rediss:// or unix:// address.
         read_timeout_s: longest wait for an answer to a read, seconds.
         write_timeout_s: longest wait for an answer to a write, seconds.
-        pool_size: most connections of each pool.
+        pool_size: most connections for writes.
 
     """
 
     def __init__(self, url: str, *, read_timeout_s: float, write_timeout_s: float, pool_size: int) -> None:
-        self.reads = _client(url, read_timeout_s, pool_size)
+        self._reading = _client(url, read_timeout_s, pool_size)
+        self._line = Line(self._reading.connection_pool, read_timeout_s)
         self.writes = _client(url, write_timeout_s, pool_size)
 
     async def start(self) -> None:
@@ -46,7 +49,8 @@ class Connection:
 
     async def close(self) -> None:
         """Close all connections."""
-        await self.reads.aclose()
+        await self._line.close()
+        await self._reading.aclose()
         await self.writes.aclose()
 
     async def run(self, calls: Sequence[Call]) -> list[Any]:
@@ -71,26 +75,38 @@ class Connection:
             return answers
 
     async def read(self, *command: bytes | str | int) -> Any:  # noqa: ANN401  whatever the command answers
-        """Run one plain command on the read pool."""
-        async with translated():
-            return await self.reads.execute_command(*command)  # type: ignore[no-untyped-call]
+        """Run one plain command on the line for reads."""
+        return (await self.read_packed(pack(command), 1))[0]
+
+    async def read_hash(self, key: bytes) -> dict[bytes, bytes]:
+        """Read a whole hash."""
+        flat = await self.read(b"HGETALL", key)
+        return dict(zip(flat[::2], flat[1::2], strict=True))
 
     async def read_many(self, commands: Sequence[Sequence[Argument]]) -> list[Any]:
-        """Run plain commands on the read pool in one round trip."""
-        async with translated():
-            answers = await _exchange(self.reads, b"".join(map(pack, commands)), len(commands))
-            for answer in answers:
-                if isinstance(answer, Exception):
-                    raise answer
-            return answers
+        """Run plain commands on the line for reads in one round trip."""
+        return await self.read_packed(b"".join(map(pack, commands)), len(commands))
 
     async def mget(self, keys: Sequence[bytes]) -> list[bytes | None]:
         """Read many strings."""
-        async with translated():
-            answer = (await _exchange(self.reads, pack_mget(keys), 1))[0]
-            if isinstance(answer, Exception):
-                raise answer
-            return list(answer)
+        found: list[bytes | None] = (await self.read_packed(pack_mget(keys), 1))[0]
+        return found
+
+    async def read_packed(self, packed: bytes, count: int) -> list[Any]:
+        """Run so many plain commands, packed already, on the line for reads.
+
+        Raises:
+            StoreUnavailable: the server does not answer, or refused a command.
+
+        """
+        try:
+            answers = await self._line.ask(packed, count)
+            for answer in answers:
+                if isinstance(answer, Exception):
+                    raise answer
+        except _FAILURES as error:
+            raise _unavailable(error) from error
+        return answers
 
     async def _pipeline(self, calls: Sequence[Call]) -> list[Any]:
         """Run calls in order and give their answers, errors of the server among them."""
@@ -138,15 +154,18 @@ def pack(parts: Iterable[Argument]) -> bytes:
     return b"*%d\r\n" % len(raw) + b"".join([b"$%d\r\n%b\r\n" % (len(part), part) for part in raw])
 
 
+_LENGTHS = [b"\r\n$%d\r\n" % length for length in range(64)]
+
+
 def pack_mget(keys: Sequence[bytes]) -> bytes:
-    r"""Write an MGET.
+    r"""Write an MGET of keys of up to 63 bytes.
 
     >>> pack_mget([b"bed"])
     b'*2\r\n$4\r\nMGET\r\n$3\r\nbed\r\n'
 
     """
-    body = b"".join([b"$%d\r\n%b\r\n" % (len(key), key) for key in keys])
-    return b"*%d\r\n$4\r\nMGET\r\n" % (len(keys) + 1) + body
+    parts = [_LENGTHS[len(key)] + key for key in keys]
+    return b"*%d\r\n$4\r\nMGET%b\r\n" % (len(keys) + 1, b"".join(parts))
 
 
 async def _exchange(client: Redis, packed: bytes, answers: int) -> list[Any]:
@@ -177,5 +196,9 @@ async def translated() -> AsyncIterator[None]:
     """
     try:
         yield
-    except (TimeoutError, RedisError, OSError) as error:
-        raise StoreUnavailable(f"the store failed: {type(error).__name__}") from error
+    except _FAILURES as error:
+        raise _unavailable(error) from error
+
+
+def _unavailable(error: Exception) -> StoreUnavailable:
+    return StoreUnavailable(f"the store failed: {type(error).__name__}")

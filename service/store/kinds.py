@@ -43,7 +43,7 @@ class KindRegistry:
             StoreUnavailable: the store does not answer.
 
         """
-        stored: dict[bytes, bytes] = await self._connection.read("HGETALL", KINDS)
+        stored = await self._connection.read_hash(KINDS)
         names = [""] * len(stored)
         for name, code in stored.items():
             names[int(code)] = name.decode()

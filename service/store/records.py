@@ -89,6 +89,24 @@ def read_record(value: bytes) -> PostRecord:
     )
 
 
+def author_of(value: bytes) -> bytes:
+    """Read the hash of a post's author from its value."""
+    return value[_HEADER.size - 8 : _HEADER.size]
+
+
+def read_item(value: bytes) -> tuple[str, str, str, int]:
+    """Read what a feed shows of a post from its value: id, author, form, and the time of posting, Unix milliseconds."""
+    head = _HEADER.unpack_from(value)
+    post_end = _HEADER.size + head[6]
+    author_end = post_end + head[7]
+    return (
+        value[_HEADER.size : post_end].decode(),
+        value[post_end:author_end].decode(),
+        value[author_end : author_end + head[3]].decode(),
+        int(head[12]),
+    )
+
+
 @dataclass(frozen=True, slots=True)
 class CrowdState:
     """The sums of several posts, as arrays.

@@ -179,7 +179,7 @@ class Store:
         bank = self.limits.half_lives
         ours = {b"format": FORMAT.encode(), b"bank": bank.encode(), b"hash_key": os.urandom(16)}
         await self.connection.run([Call(None, [], [b"HSETNX", keys.META, name, value]) for name, value in ours.items()])
-        self.meta = dict(await self.connection.read("HGETALL", keys.META))
+        self.meta = await self.connection.read_hash(keys.META)
         if self.meta[b"format"] != FORMAT.encode():
             raise StoreMismatchError(
                 f"store: its format is {self.meta[b'format'].decode()}, this program writes {FORMAT}"
