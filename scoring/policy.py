@@ -35,7 +35,7 @@ _gain = fields.number("a gain is a finite number")
 _affinity = fields.number("an affinity is 0 or more", low=0.0)
 _ceiling = fields.number("the ceiling is above 0", above=0.0)
 _exponent = fields.number("an exponent is above 0", above=0.0)
-_temperature = fields.number("a temperature is 0 or more", low=0.0)
+_temperature = fields.number("a temperature is 0 to 20", low=0.0, high=20.0)
 _author_gap = fields.whole("an author gap is a whole number from 0 to 50", low=0, high=50)
 _seen_factor = fields.number("a factor is from 0 to 1", low=0.0, high=1.0)
 

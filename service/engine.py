@@ -2,6 +2,7 @@
 
 import time
 from collections.abc import Sequence
+from pathlib import Path
 from typing import Any
 
 from scoring.bank import DEFAULT_BANK, Bank
@@ -64,7 +65,7 @@ class Engine:
 
         Raises:
             PolicyRefused: a policy has an error.
-            SettingsError: the store's address is not one that can be used.
+            SettingsError: the store's address is not one that can be used, or a policy file can't be read.
 
         """
         if settings.store_kind != "single":
@@ -78,7 +79,7 @@ class Engine:
             write_timeout_s=settings.write_timeout_ms / 1000,
             pool_size=settings.pool_size,
         )
-        texts = [path.read_text() for path in settings.policies]
+        texts = [_policy_text(path) for path in settings.policies]
         return cls(
             options,
             texts,
@@ -155,3 +156,12 @@ class Engine:
     async def _load_policies(self) -> None:
         stored = await self.store.connection.read_hash(POLICIES)
         self._policies.load_all({name.decode(): text.decode() for name, text in stored.items()})
+
+
+def _policy_text(path: Path) -> str:
+    try:
+        return path.read_text(encoding="utf-8")
+    except (OSError, UnicodeDecodeError) as error:
+        raise SettingsError(
+            [f"policies: {str(path)!r} can't be read: {error}; allowed: TOML files in UTF-8"]
+        ) from error

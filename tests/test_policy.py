@@ -187,7 +187,8 @@ def test_weights_and_gains_come_as_arrays() -> None:
             "[freshness]\nhalf_life = '1h'\nfloor = 0",
             "line 6: freshness.floor: is not known: allowed here are curve, half_life,",
         ),
-        ("[explore]\ntemperature = -1", "line 5: explore.temperature: -1 is not allowed: a temperature is 0 or more"),
+        ("[explore]\ntemperature = -1", "line 5: explore.temperature: -1 is not allowed: a temperature is 0 to 20"),
+        ("[explore]\ntemperature = 21", "line 5: explore.temperature: 21 is not allowed: a temperature is 0 to 20"),
         ("[explore]\nheat = 1", "line 5: explore.heat: is not known: allowed here are temperature"),
         (
             "[arrange]\nauthor_gap = 51",
@@ -353,7 +354,7 @@ policies = st.builds(
         spans_ms,
         st.dictionaries(kinds, st.floats(min_value=-1e9, max_value=1e9), max_size=4),
     ),
-    temperature=amounts,
+    temperature=st.floats(min_value=0.0, max_value=20.0),
     author_gap=st.integers(0, 50),
     seen_factor=st.floats(min_value=0.0, max_value=1.0),
 )

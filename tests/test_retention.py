@@ -41,9 +41,13 @@ async def engine(redis_db: str) -> AsyncIterator[Engine]:
         yield engine
 
 
-def limit(engine: Engine, *, row_edges: int = 1_000, ties: int = 1_000, seen_posts: int = 1_000) -> None:
+def limit(
+    engine: Engine, *, row_edges: int = 1_000, ties: int = 1_000, seen_posts: int = 1_000, other_events: int = 1_000
+) -> None:
     """Let the store keep less for one person."""
-    engine.store.limits = replace(engine.store.limits, row_edges=row_edges, ties=ties, seen_posts=seen_posts)
+    engine.store.limits = replace(
+        engine.store.limits, row_edges=row_edges, ties=ties, seen_posts=seen_posts, other_events=other_events
+    )
     engine.store._set_up()
 
 
@@ -173,7 +177,8 @@ async def test_a_full_row_refuses_and_empties_with_time(engine: Engine) -> None:
         [verdict] = await send(engine, [more], NOW_MS)
         assert verdict.outcome == "rejected"
         assert verdict.reason == (
-            "actor: this person has reached what is kept for one person: 5 edges within retention and 1000 ties"
+            "actor: this person has reached what is kept for one person: "
+            "1000 ties and, within retention, 5 edges and 1000 other events"
         )
         others = more | {"actor": "walt", "id": f"w{more['id']}", "post": more["id"]}
         assert await outcomes(engine, [others], NOW_MS) == ["applied"]
@@ -289,3 +294,21 @@ async def test_a_flood_ahead_of_the_clock_is_bounded(engine: Engine) -> None:
     assert exact <= (soon or 0.0) <= exact * 2.0 ** (ahead_ms / 3_600_000)
     [(_, then)] = await ranked(engine, "joel", NOW_MS + ahead_ms)
     assert then == pytest.approx(1.5 * 2.0 ** (-ahead_ms / 3_600_000) + 0.5 * 0.5 * people, rel=1e-12)
+
+
+async def test_other_events_of_one_person_are_bounded(engine: Engine) -> None:
+    """Past the limit events that are no edges are refused with the reason until old ones leave; erasing works."""
+    limit(engine, other_events=3)
+    early = NOW_MS - RETENTION_MS + 1_000
+    assert await outcomes(engine, [seen(n, early + n, f"bed {n}") for n in range(3)], NOW_MS) == ["applied"] * 3
+    retract = {"id": "r1", "type": "retract", "at": NOW_MS, "actor": "joel", "event": "l1"}
+    withdraw = {"id": "w1", "type": "withdraw", "at": NOW_MS, "actor": "joel", "post": "bed 1"}
+    verdicts = await send(engine, [seen(9, NOW_MS, "bed 9"), tie(1, NOW_MS, "mina"), retract, withdraw], NOW_MS)
+    assert [verdict.outcome for verdict in verdicts] == ["rejected"] * 4
+    assert all("3 other events" in (verdict.reason or "") for verdict in verdicts)
+    assert len(await kept(engine, "heard", "joel")) == 3 * 16
+    later = NOW_MS + 10_000
+    assert await outcomes(engine, [seen(9, later, "bed 9"), tie(1, later, "mina")], later) == ["applied"] * 2
+    erase = {"id": "x1", "type": "erase", "at": later, "actor": "joel"}
+    await send(engine, [seen(10, later, "bed 9"), seen(11, later, "bed 9")], later)
+    assert await outcomes(engine, [erase], later) == ["applied"]

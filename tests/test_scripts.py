@@ -44,7 +44,7 @@ SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] 
     "log_changes": (lambda: calls.log_changes([A, B], [C]), (), ()),
     "purge_posts": (lambda: calls.purge_posts(EFFECT, 1, [A, B], C, NOW_MS, NOW_MS, LIMITS), (2,), ()),
     "put_creation": (lambda: calls.put_creation(A, 9, B * 2, NOW_MS, LIMITS), (), ()),
-    "put_incoming": (lambda: calls.put_incoming(EFFECT, TIE, marked=True), (), ()),
+    "put_incoming": (lambda: calls.put_incoming(EFFECT, TIE, NOW_MS, marked=True), (), ()),
     "put_outgoing": (lambda: calls.put_outgoing(9, TIE, NOW_MS), (), ()),
     "put_post": (lambda: calls.put_post(EFFECT, WRITE, NOW_MS, LIMITS), (), ()),
     "register_kinds": (lambda: calls.register_kinds(["like", "share", "hide"], 9), (), (3,)),

@@ -239,7 +239,7 @@ def test_on_equal_times_the_greater_id_stands(store: Store, lesser: str, greater
     ties = [tie(lesser, 4), tie(greater, 1)]
     for seq, one in enumerate(reversed(ties) if turned else ties, 1):
         store.client.zadd(keys.outbox(7), {f"{seq:016}": seq})
-        assert store.run(calls.put_incoming(effect(seq), one, marked=one.relation == 4)) == 0
+        assert store.run(calls.put_incoming(effect(seq), one, OLDEST_MS, marked=one.relation == 4)) == 0
         assert store.run(calls.put_outgoing(seq, one, OLDEST_MS)) == 1
     stands = stamp(NOW_MS, 1) + greater.encode()
     assert store.relations("in", JOEL) == {MINA: stands}
@@ -252,7 +252,7 @@ def test_none_stands_against_what_came_before_it(store: Store) -> None:
     """A later `none` empties the lists, and its trace keeps an earlier relation out that arrives after it."""
     for seq, one in enumerate([tie("e1", 2, NOW_MS - 9), tie("e2", 0), tie("e3", 2, NOW_MS - 1)], 1):
         store.client.zadd(keys.outbox(7), {f"{seq:016}": seq})
-        store.run(calls.put_incoming(effect(seq), one, marked=one.relation == 2))
+        store.run(calls.put_incoming(effect(seq), one, OLDEST_MS, marked=one.relation == 2))
         store.run(calls.put_outgoing(seq, one, OLDEST_MS))
     assert store.relations("in", JOEL) == {MINA: stamp(NOW_MS, 0) + b"e2"}
     assert store.relations("tie", MINA) == {JOEL: stamp(NOW_MS, 0) + b"e2"}
@@ -269,33 +269,43 @@ def test_traces_of_none_leave_after_retention(store: Store) -> None:
     assert store.relations("tie", MINA) == new | standing | {JOEL: stamp(NOW_MS, 1) + b"e1"}
 
 
+def test_traces_of_none_leave_the_other_side_too(store: Store) -> None:
+    """Writes by and by remove traces older than retention, and nothing else, from the target's side."""
+    old, new, standing = ({bytes([kind, number]) * 4: stamp(at_ms, code) + b"e" for number in range(20)}
+        for kind, at_ms, code in ((1, OLDEST_MS - 1, 0), (2, OLDEST_MS, 0), (3, OLDEST_MS - 1, 1)))  # fmt: skip
+    store.client.hset(keys.key("in", JOEL), mapping=old | new | standing)
+    for seq in range(1, 200):
+        store.run(calls.put_incoming(effect(seq), tie(f"e{seq:03}", 1, NOW_MS + seq), OLDEST_MS, marked=False))
+    assert store.relations("in", JOEL) == new | standing | {MINA: stamp(NOW_MS + 199, 1) + b"e199"}
+
+
 def test_a_far_effect_is_let_through_once(store: Store) -> None:
     """A number that was applied, or lies below what is settled, changes nothing; numbers may come in any order."""
     for seq, relation in ((3, 1), (2, 4), (3, 2)):
         one = tie(f"e{seq}{relation}", relation, NOW_MS + relation)
-        assert store.run(calls.put_incoming(effect(seq, 1), one, marked=False)) == 0
+        assert store.run(calls.put_incoming(effect(seq, 1), one, OLDEST_MS, marked=False)) == 0
     assert store.relations("in", JOEL) == {MINA: stamp(NOW_MS + 4, 4) + b"e24"}
     assert sorted(store.client.hget(keys.applied(7), b"7t").split(b",")) == [b"1", b"2", b"3"]
-    store.run(calls.put_incoming(effect(9, 5), tie("e9", 3, NOW_MS + 9), marked=False))
+    store.run(calls.put_incoming(effect(9, 5), tie("e9", 3, NOW_MS + 9), OLDEST_MS, marked=False))
     assert store.client.hget(keys.applied(7), b"7t") == b"5,9"
-    store.run(calls.put_incoming(effect(4, 5), tie("e99", 2, NOW_MS + 99), marked=False))
+    store.run(calls.put_incoming(effect(4, 5), tie("e99", 2, NOW_MS + 99), OLDEST_MS, marked=False))
     assert store.relations("in", JOEL) == {MINA: stamp(NOW_MS + 9, 3) + b"e9"}
 
 
 def test_a_tie_to_somebody_who_cannot_take_it(store: Store) -> None:
     """A tie up to the target's erasure is refused with 2, one to another id with the target's hash with 3."""
     store.run(calls.take_erase(event(E1, NOW_MS, JOEL, "joel"), NOW_MS, LIMITS))
-    assert store.run(calls.put_incoming(effect(1), tie("e1", 1), marked=False)) == 2
-    assert store.run(calls.put_incoming(effect(1), tie("e1", 1, NOW_MS + 1), marked=False)) == 0
+    assert store.run(calls.put_incoming(effect(1), tie("e1", 1), OLDEST_MS, marked=False)) == 2
+    assert store.run(calls.put_incoming(effect(1), tie("e1", 1, NOW_MS + 1), OLDEST_MS, marked=False)) == 0
     other = TieWrite(MINA, JOEL, "Joel", NOW_MS + 2, 1, "e2")
-    assert store.run(calls.put_incoming(effect(2), other, marked=False)) == 3
+    assert store.run(calls.put_incoming(effect(2), other, OLDEST_MS, marked=False)) == 3
     assert store.life_ms("name", JOEL) == -1
 
 
 def test_an_erased_person_leaves_the_relations_of_others(store: Store) -> None:
     """What was declared up to the erasure goes from hash and list, once; what is newer stays."""
     for seq, (one, source) in enumerate([(2, MINA), (4, ADA)], 1):
-        store.run(calls.put_incoming(effect(seq), tie("e", one, NOW_MS + seq, source), marked=True))
+        store.run(calls.put_incoming(effect(seq), tie("e", one, NOW_MS + seq, source), OLDEST_MS, marked=True))
     drop = calls.drop_relation(Effect(7, "i", 1, 0), 7, ("in", "mark"), [JOEL, ADA], MINA, NOW_MS + 1)
     assert store.run(drop) == 1
     assert store.run(drop) == 0

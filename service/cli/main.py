@@ -2,7 +2,6 @@
 
 import importlib
 import importlib.metadata
-import importlib.util
 from typing import Annotated
 
 import typer
@@ -37,12 +36,11 @@ def _root(*, version: Version = False) -> None:
 
 
 def build() -> typer.Typer:
-    """Build the application with the commands of every module that is there."""
+    """Build the application with every module's commands."""
     app = typer.Typer(no_args_is_help=True, pretty_exceptions_show_locals=False, add_completion=False)
     app.callback()(_root)
     for name in MODULES:
-        if importlib.util.find_spec(name) is not None:
-            importlib.import_module(name).register(app)
+        importlib.import_module(name).register(app)
     return app
 
 

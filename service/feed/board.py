@@ -15,6 +15,10 @@ LISTED = 500
 
 _CLOSE_ENOUGH = 2.0
 
+_ROUNDED = 1e-9
+"""Allows for rounding, beside that of the marks: a mark is about as large as the time over the half-life, and has been
+rounded a few times to 53 bits of that; the error comes out of the power multiplied by its logarithm."""
+
 Command = tuple[bytes | str | int, ...]
 
 
@@ -105,5 +109,6 @@ class BoardReader:
         return CrowdBound(np.concatenate((state.post, unknown)), bounds, others)
 
     def _values(self, marks: NDArray[np.float64], t_ms: int) -> NDArray[np.float64]:
-        values: NDArray[np.float64] = self._scale * np.exp2(marks - t_ms / self._half_life_ms)
-        return values * (1.0 + 1e-9)
+        now = t_ms / self._half_life_ms
+        values: NDArray[np.float64] = self._scale * np.exp2(marks - now)
+        return values * (1.0 + _ROUNDED + now * 2.0**-50)

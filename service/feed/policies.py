@@ -13,6 +13,9 @@ from service.feed.types import PolicyInfo
 POST_LIVES = 13
 """A post, and with it the oldest edge in its sums, leaves before this many times the retention."""
 
+AHEAD_MS = 30 * 24 * 60 * 60 * 1000
+"""How far ahead of now a feed may be ranked: its edges are so much older then, milliseconds."""
+
 
 @dataclass(frozen=True, slots=True)
 class LoadedPolicy:
@@ -111,7 +114,8 @@ class PolicyBook:
             if name not in self._loaded:
                 raise UnknownPolicy(name, list(self._loaded))
             ranking = compile_policy(self._loaded[name].policy, self._bank, kinds, self._horizon_ms)
-            prepared = PreparedPolicy(ranking, BoardReader(ranking, self._board_slots, POST_LIVES * self._horizon_ms))
+            longest_ms = POST_LIVES * self._horizon_ms + AHEAD_MS
+            prepared = PreparedPolicy(ranking, BoardReader(ranking, self._board_slots, longest_ms))
             self._prepared[name] = prepared
         return prepared
 

@@ -57,6 +57,7 @@ class StoreLimits:
         row_edges: most edges a person may have within retention.
         ties: most ties a person may declare.
         seen_posts: most seen posts kept for a reader.
+        other_events: most events that are no edges a person may have within retention.
 
     """
 
@@ -68,6 +69,7 @@ class StoreLimits:
     row_edges: int = 200_000
     ties: int = 20_000
     seen_posts: int = 2_000
+    other_events: int = 100_000
 
     def oldest_ms(self, now_ms: int) -> int:
         """Give the time of the oldest event still kept."""
@@ -144,7 +146,7 @@ def take_event(
     script_keys += [keys.key(name, person) for name in ("name", "erased", "ids", "heard", "row", "tie", "who", "out")]
     args: list[Argument] = [now_ms * 1000, limits.oldest_ms(now_ms), limits.ttl_ms, event.person_id, event.id_hash]
     args += [event.event_ms, event.piece, before, limits.row_edges if writes_row else 0]
-    args += [limits.ties if tie_target else 0, tie_target, int(lasting)]
+    args += [limits.ties if tie_target else 0, tie_target, int(lasting), limits.other_events]
     return Call(load("take_event"), script_keys, args)
 
 
@@ -154,14 +156,14 @@ def take_retract(event: NewEvent, now_ms: int, limits: StoreLimits, target: byte
     script_keys = [keys.seq(number), keys.outbox(number)]
     script_keys += [keys.key(name, person) for name in ("name", "erased", "ids", "heard", "row", "undo")]
     args: list[Argument] = [now_ms * 1000, limits.oldest_ms(now_ms), limits.ttl_ms, event.person_id, event.id_hash]
-    return Call(load("take_retract"), script_keys, [*args, event.event_ms, target, event.piece])
+    return Call(load("take_retract"), script_keys, [*args, event.event_ms, target, event.piece, limits.other_events])
 
 
 def take_seen(event: NewEvent, now_ms: int, limits: StoreLimits, posts: Sequence[bytes]) -> Call:
     """Note seen posts."""
     script_keys = [keys.key(name, event.person) for name in ("name", "erased", "ids", "heard", "seen")]
     args: list[Argument] = [limits.oldest_ms(now_ms), limits.ttl_ms, event.person_id, event.id_hash, event.event_ms]
-    return Call(load("take_seen"), script_keys, [*args, limits.seen_posts, *posts])
+    return Call(load("take_seen"), script_keys, [*args, limits.seen_posts, limits.other_events, *posts])
 
 
 def take_erase(event: NewEvent, now_ms: int, limits: StoreLimits) -> Call:
@@ -285,12 +287,12 @@ class TieWrite:
     event_id: str
 
 
-def put_incoming(effect: Effect, tie: TieWrite, *, marked: bool) -> Call:
+def put_incoming(effect: Effect, tie: TieWrite, oldest_ms: int, *, marked: bool) -> Call:
     """Write a relation on its target's side."""
     script_keys = [keys.applied(bucket(tie.target))]
     script_keys += [keys.key(name, tie.target) for name in ("name", "erased", "in", "mark")]
     args = [*effect.head(), tie.source, tie.target_id, tie.event_ms, tie.relation, tie.event_id, int(marked)]
-    return Call(load("put_incoming"), script_keys, args)
+    return Call(load("put_incoming"), script_keys, [*args, oldest_ms])
 
 
 def put_outgoing(seq: int, tie: TieWrite, oldest_ms: int) -> Call:

@@ -4,6 +4,7 @@ from collections.abc import AsyncIterator, Iterable, Sequence
 from contextlib import asynccontextmanager
 from typing import Any
 
+import structlog
 from redis.asyncio import BlockingConnectionPool, Redis
 from redis.asyncio.connection import AbstractConnection
 from redis.asyncio.retry import Retry
@@ -15,7 +16,10 @@ from service.store.calls import Argument, Call
 from service.store.line import Line
 from service.store.scripts import load, names
 
+log = structlog.get_logger("waxwane.store")
+
 _POOL_WAIT_S = 1.0
+_SHOWN_CHARS = 500
 _FAILURES = (TimeoutError, RedisError, OSError)
 
 
@@ -201,4 +205,8 @@ async def translated() -> AsyncIterator[None]:
 
 
 def _unavailable(error: Exception) -> StoreUnavailable:
-    return StoreUnavailable(f"the store failed: {type(error).__name__}")
+    """Translate an error; what a server said goes to the log, and its first word, which is its kind, to the caller."""
+    if not isinstance(error, ResponseError):
+        return StoreUnavailable(f"the store failed: {type(error).__name__}")
+    log.error("store_refused", reason=str(error)[:_SHOWN_CHARS])
+    return StoreUnavailable(f"the store refused a command: {str(error).split(' ', 1)[0][:32]}")

@@ -201,7 +201,11 @@ class Driver:
     def _tie(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
         tie = read_tie_piece(entry.pieces[0], self._hasher)
         marked = RELATIONS[tie.relation] in MARKED
-        far = [calls.put_incoming(Effect(entry.bucket, "t", entry.seq, entry.low), tie, marked=marked)]
+        far = [
+            calls.put_incoming(
+                Effect(entry.bucket, "t", entry.seq, entry.low), tie, self._limits.oldest_ms(now_ms), marked=marked
+            )
+        ]
 
         def then(answers: list[Any]) -> Step:
             if answers[0]:

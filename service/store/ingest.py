@@ -257,7 +257,9 @@ def _json(event: AnyEvent, **more: int) -> bytes:
 
 def _verdict(outcome: int, limits: StoreLimits) -> Verdict:
     if outcome == 4:  # noqa: PLR2004  the scripts' code
-        most = f"{limits.row_edges} edges within retention and {limits.ties} ties"
+        most = (
+            f"{limits.ties} ties and, within retention, {limits.row_edges} edges and {limits.other_events} other events"
+        )
         return Verdict("rejected", f"actor: this person has reached what is kept for one person: {most}")
     table = {0: APPLIED, 1: DUPLICATE, 2: EXPIRED, 3: Verdict("rejected", _REFUSED["hash"]), 5: APPLIED}
     return table[outcome]

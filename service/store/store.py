@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import structlog
 
 from scoring.bank import Bank
-from service.errors import WaxwaneError
+from service.errors import StoreUnavailable, WaxwaneError
 from service.events.model import AnyEvent
 from service.periodic import Periodic
 from service.store import keys
@@ -166,10 +166,16 @@ class Store:
         return [(number, member) for number, members in enumerate(answers) for member in members]
 
     async def _drive_all(self, entries: Sequence[tuple[int, bytes]], now_ms: int) -> int:
+        done = 0
         for number, member in entries:
             # Nothing is known of the low mark here: 0 prunes nothing and is always true.
-            await self.driver.drive([Entry.read(number, 0, member)], now_ms, {})
-        return len(entries)
+            try:
+                await self.driver.drive([Entry.read(number, 0, member)], now_ms, {})
+            except StoreUnavailable as error:
+                log.warning("entry_left_open", bucket=number, reason=str(error))
+            else:
+                done += 1
+        return done
 
     async def trim_boards(self) -> None:
         """Keep the boards to their greatest posts."""

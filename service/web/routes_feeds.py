@@ -1,13 +1,13 @@
 """GET /v1/feeds/…: a reader's feed, and why a post has its score."""
 
-from typing import Annotated, Any
+from typing import Annotated
 
 import orjson
 from fastapi import APIRouter, Query, Request
 from starlette.responses import Response
 
-from service.feed.types import CrowdPart, ExplainRequest, Explanation, FeedAnswer, FeedItem, FeedRequest, TiePart
-from service.times import format_ms
+from service.feed.answers import explanation_document, page_document
+from service.feed.types import ExplainRequest, FeedRequest
 from service.web import clock, documents, schemas
 from service.web.middleware import arrived_s
 from service.web.parameters import ExplainQuery, FeedQuery, PathId, as_of_within, known_only
@@ -28,7 +28,7 @@ async def read_feed(request: Request, reader: PathId, query: Annotated[FeedQuery
     feed_request = _feed_request(reader, query, now_ms)
     answer = await state_of(request).engine.feed(feed_request, now_ms, arrived_s(request.scope))
     headers = {"Server-Timing": _server_timing(answer.stages_ms, clock.since_ms(arrived_s(request.scope)))}
-    return Response(orjson.dumps(_page(answer)), headers=headers, media_type="application/json")
+    return Response(orjson.dumps(page_document(answer)), headers=headers, media_type="application/json")
 
 
 @router.get(
@@ -44,7 +44,7 @@ async def explain_score(
     now_ms = clock.now_ms()
     asked = ExplainRequest(reader, post, query.policy, as_of_within(query.as_of, now_ms))
     explanation = await state_of(request).engine.explain(asked, now_ms)
-    return Response(orjson.dumps(_explained(explanation)), media_type="application/json")
+    return Response(orjson.dumps(explanation_document(explanation)), media_type="application/json")
 
 
 def _feed_request(reader: str, query: FeedQuery, now_ms: int) -> FeedRequest:
@@ -61,56 +61,6 @@ def _feed_request(reader: str, query: FeedQuery, now_ms: int) -> FeedRequest:
     )
 
 
-def _page(answer: FeedAnswer) -> dict[str, Any]:
-    return {
-        "reader": answer.reader,
-        "as_of": format_ms(answer.as_of_ms),
-        "policy": answer.policy,
-        "complete": answer.complete,
-        "items": [_item(item) for item in answer.items],
-        "next": answer.next,
-    }
-
-
-def _item(item: FeedItem) -> dict[str, Any]:
-    return {
-        "post": item.post,
-        "author": item.author,
-        "form": item.form,
-        "posted_at": format_ms(item.posted_ms),
-        "score": item.score,
-    }
-
-
 def _server_timing(stages_ms: dict[str, float], total_ms: float) -> str:
     """Write the stages as the Server Timing specification of the W3C has them, durations in milliseconds."""
     return ", ".join(f"{name};dur={duration:.3f}" for name, duration in {**stages_ms, "total": total_ms}.items())
-
-
-def _explained(explanation: Explanation) -> dict[str, Any]:
-    return {
-        "reader": explanation.reader,
-        "post": explanation.post,
-        "as_of": format_ms(explanation.as_of_ms),
-        "policy": explanation.policy,
-        "score": explanation.score,
-        "factors": [{"name": factor.name, "value": factor.value} for factor in explanation.factors],
-        "parts": [*map(_tie_part, explanation.ties), _crowd_part(explanation.crowd)],
-    }
-
-
-def _tie_part(part: TiePart) -> dict[str, Any]:
-    return {
-        "source": "tie",
-        "actor": part.actor,
-        "kind": part.kind,
-        "at": format_ms(part.at_ms),
-        "affinity": part.affinity,
-        "weight": part.weight,
-        "freshness": part.freshness,
-        "product": part.product,
-    }
-
-
-def _crowd_part(part: CrowdPart) -> dict[str, Any]:
-    return {"source": "crowd", "affinity": part.affinity, "sum": part.sum, "product": part.product}

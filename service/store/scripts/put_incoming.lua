@@ -2,9 +2,10 @@
 -- Write a relation on the side of the person it is about, once; the latest stands.
 -- KEYS[1] applied:{b} hash · KEYS[2] name · KEYS[3] erased · KEYS[4] in (hash) · KEYS[5] mark (packed list)
 -- ARGV[1] source bucket and effect · ARGV[2] number · ARGV[3] low · ARGV[4] source hash · ARGV[5] target id ·
---   ARGV[6] event time, ms · ARGV[7] relation code · ARGV[8] event id · ARGV[9] 1 where the relation is marked
+--   ARGV[6] event time, ms · ARGV[7] relation code · ARGV[8] event id · ARGV[9] 1 where the relation is marked ·
+--   ARGV[10] oldest time kept, ms
 -- Returns 0, or 2 where the target was erased at or after the event's time, or 3 where another id has its hash
--- Costs 3 to 8 commands.
+-- Costs 3 to 10 commands.
 local event_ms = tonumber(ARGV[6])
 local known = redis.call('GET', KEYS[2])
 if known and known ~= ARGV[5] then
@@ -24,6 +25,16 @@ if stood and not later(event_ms, ARGV[8], slot_ms('--------' .. stood, 1), strin
 end
 local stamp = pack_stamp(event_ms, tonumber(ARGV[7]))
 redis.call('HSET', KEYS[4], ARGV[4], stamp .. ARGV[8])
+
+-- A `none` older than retention can no longer be contradicted. Some entries by chance are looked at with each write, so
+-- that such traces leave about as fast as they come.
+local some = redis.call('HRANDFIELD', KEYS[4], 4, 'WITHVALUES')
+for i = 1, #some, 2 do
+  local value = '--------' .. some[i + 1]
+  if slot_code(value, 1) == 0 and slot_ms(value, 1) < tonumber(ARGV[10]) then
+    redis.call('HDEL', KEYS[4], some[i])
+  end
+end
 
 local marks = redis.call('GET', KEYS[5]) or ''
 local at = find_slot(marks, ARGV[4], 16)

@@ -5,7 +5,8 @@
 -- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime, ms · ARGV[4] person id ·
 --   ARGV[5] event id hash · ARGV[6] event time, ms · ARGV[7] outbox piece · ARGV[8] what earlier outstanding
 --   entries must be settled first: those that hold these bytes ('' none) · ARGV[9] most edges in the row, 0 any ·
---   ARGV[10] most ties, 0 any · ARGV[11] the tie's target hash · ARGV[12] 1 where an erasure does not undo the event
+--   ARGV[10] most ties, 0 any · ARGV[11] the tie's target hash · ARGV[12] 1 where an erasure does not undo the event ·
+--   ARGV[13] most events that are no edges
 -- Returns {outcome, number or 0, low, outstanding entries to settle first}; outcomes as in take_interactions.lua
 -- Costs 9 to 16 commands, 6 more where old edges leave.
 local event_ms, ttl_ms = tonumber(ARGV[6]), ARGV[3]
@@ -16,6 +17,9 @@ end
 local refusal = refuse_person(KEYS[3], KEYS[4], ARGV[4], ARGV[12] == '1' and math.huge or event_ms, ttl_ms)
 if refusal then
   return { refusal, 0, 0, {} }
+end
+if heard_full(heard, tonumber(ARGV[2]), tonumber(ARGV[13])) then
+  return { 4, 0, 0, {} }
 end
 local row_limit, tie_limit = tonumber(ARGV[9]), tonumber(ARGV[10])
 if row_limit > 0 then

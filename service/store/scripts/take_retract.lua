@@ -4,7 +4,7 @@
 --   KEYS[7] row · KEYS[8] undo (packed lists but for the first four)
 -- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime, ms · ARGV[4] person id ·
 --   ARGV[5] event id hash · ARGV[6] event time, ms · ARGV[7] id hash of what is taken back ·
---   ARGV[8] head of the outbox piece, to which the edge is added
+--   ARGV[8] head of the outbox piece, to which the edge is added · ARGV[9] most events that are no edges
 -- Returns {outcome, 0, low, all that is outstanding in the bucket, this one last}
 -- Costs 9 to 16 commands.
 local event_ms, ttl_ms = tonumber(ARGV[6]), ARGV[3]
@@ -15,6 +15,9 @@ end
 local refusal = refuse_person(KEYS[3], KEYS[4], ARGV[4], event_ms, ttl_ms)
 if refusal then
   return { refusal, 0, 0, {} }
+end
+if heard_full(heard, tonumber(ARGV[2]), tonumber(ARGV[9])) then
+  return { 4, 0, 0, {} }
 end
 remember(KEYS[6], heard, ARGV[5], event_ms, tonumber(ARGV[2]), ttl_ms)
 

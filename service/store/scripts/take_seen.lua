@@ -2,7 +2,7 @@
 -- Note which posts a reader has seen; the newest of them are kept, in order of time.
 -- KEYS[1] name · KEYS[2] erased · KEYS[3] ids · KEYS[4] heard · KEYS[5] seen (packed lists but for the first two)
 -- ARGV[1] oldest time kept, ms · ARGV[2] lifetime, ms · ARGV[3] person id · ARGV[4] event id hash ·
---   ARGV[5] event time, ms · ARGV[6] most posts kept · ARGV[7…] post hashes
+--   ARGV[5] event time, ms · ARGV[6] most posts kept · ARGV[7] most events that are no edges · ARGV[8…] post hashes
 -- Returns the outcome, as in take_interactions.lua
 -- Costs 8 commands.
 local oldest_ms, event_ms, ttl_ms = tonumber(ARGV[1]), tonumber(ARGV[5]), ARGV[2]
@@ -13,6 +13,9 @@ end
 local refusal = refuse_person(KEYS[1], KEYS[2], ARGV[3], event_ms, ttl_ms)
 if refusal then
   return refusal
+end
+if heard_full(heard, oldest_ms, tonumber(ARGV[7])) then
+  return 4
 end
 remember(KEYS[4], heard, ARGV[4], event_ms, oldest_ms, ttl_ms)
 
@@ -48,7 +51,7 @@ local function note(post)
   seen = string.sub(seen, 1, at - 1) .. post .. pack_stamp(event_ms, 0) .. string.sub(seen, at)
 end
 
-for i = 7, #ARGV do
+for i = 8, #ARGV do
   note(ARGV[i])
 end
 local over = #seen - 16 * tonumber(ARGV[6])
