@@ -88,7 +88,11 @@ def acquaintance(
 ) -> Acquaintance:
     """Gather a reader's circle; see `circle` for the arguments."""
     everyone = np.concatenate([tie_person, dealings.author, np.array([reader], dtype=np.uint64)])
-    person, place = np.unique(everyone, return_inverse=True)
+    order = np.argsort(everyone, kind="stable")
+    ordered = everyone[order]
+    first = np.concatenate(([True], ordered[1:] != ordered[:-1]))
+    person, place = ordered[first], np.empty(len(order), dtype=np.intp)
+    place[order] = np.cumsum(first) - 1
     relation = np.zeros(len(person), dtype=np.uint8)
     relation[place[: len(tie_person)]] = tie_relation
     return Acquaintance(int(place[-1]), person, relation, dealings, place[len(tie_person) : -1])

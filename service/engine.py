@@ -161,7 +161,7 @@ class Engine:
 def _policy_text(path: Path) -> str:
     try:
         return path.read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError) as error:
-        raise SettingsError(
-            [f"policies: {str(path)!r} can't be read: {error}; allowed: TOML files in UTF-8"]
-        ) from error
+    except OSError as error:
+        raise SettingsError([f"policies: {path} can't be read: {error.strerror}"]) from error
+    except UnicodeDecodeError as error:
+        raise SettingsError([f"policies: {path} can't be read: it is not UTF-8 from byte {error.start} on"]) from error

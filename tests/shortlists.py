@@ -9,6 +9,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, cast
 
+import hiredis
 import numpy as np
 
 from scoring.affinity import BLOCK, FOLLOW, NONE, Circle
@@ -195,10 +196,14 @@ class FakeConnection:
         self.values = values
         self.asked: list[bytes] = []
 
-    async def mget(self, wanted: Sequence[bytes]) -> list[bytes | None]:
-        """Give values as the store does, None where there is none."""
+    async def read_packed(self, packed: bytes, count: int) -> list[list[bytes | None]]:
+        """Answer one MGET as the store does, None where there is nothing."""
+        parser = hiredis.Reader()
+        parser.feed(packed)
+        name, *wanted = parser.gets()
+        assert (name, count) == (b"MGET", 1)
         self.asked += wanted
-        return [self.values.get(key) for key in wanted]
+        return [[self.values.get(key) for key in wanted]]
 
 
 class Patience(Deadline):

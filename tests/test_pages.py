@@ -8,6 +8,7 @@ import pytest
 
 from service.engine import Engine
 from service.errors import CursorExpired, CursorInvalid
+from service.feed import ranker
 from service.feed.types import FeedAnswer, FeedRequest
 from service.settings import BUILT_IN_POLICY
 from service.store import keys
@@ -156,7 +157,10 @@ async def test_a_foreign_or_changed_cursor_is_refused(engine: Engine) -> None:
 
 async def test_pages_that_are_no_longer_kept_are_said_to_be(engine: Engine) -> None:
     """Ten minutes after the last page its cursor is expired; until then its key has that lifetime."""
-    cursor = (await page(engine)).next
+    first = await page(engine)
+    assert await engine.store.connection.read("KEYS", "page:*") == []
+    assert len((await page(engine, first.next)).items) == 10
+    cursor = (await page(engine, first.next)).next
     stored = await engine.store.connection.read("KEYS", "page:*")
     assert len(stored) == 1
     assert 590_000 < await engine.store.connection.read("PTTL", stored[0]) <= 600_000
@@ -164,6 +168,20 @@ async def test_pages_that_are_no_longer_kept_are_said_to_be(engine: Engine) -> N
     with pytest.raises(CursorExpired, match="no longer kept"):
         await page(engine, cursor)
     assert keys.key("page", stored[0][-8:]) == stored[0]
+    request = FeedRequest("joel", k=10, budget_ms=60_000.0, cursor=first.next)
+    assert len((await engine.feed(request, NOW_MS + 10 * MINUTE_MS)).items) == 10
+    with pytest.raises(CursorExpired, match="no longer kept"):
+        await engine.feed(request, NOW_MS + 10 * MINUTE_MS + 1)
+
+
+async def test_a_long_first_page_is_kept_by_the_store(engine: Engine, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Where a cursor can't hold all that its page served, the store does, and the pages go on as ever."""
+    monkeypatch.setattr(ranker, "CARRIED", 9)
+    first = await page(engine)
+    assert len(await engine.store.connection.read("KEYS", "page:*")) == 1
+    second = await page(engine, first.next)
+    assert posts_of(first) + posts_of(second) == POSTS[:20]
+    assert len(first.next or "") < len("x" * 8 * 10)
 
 
 async def test_authors_stand_apart_across_pages(redis_db: str) -> None:

@@ -98,7 +98,6 @@ static inline Cell *cell_of(Gathering *g, uint64_t post) {
 
 static int add_row(Gathering *g, const Rule *rule, const char *row, int64_t edges, double affinity, int tie,
                    double t_ms) {
-    const double inverse = 1.0 / rule->scale_ms;
     const int plain = !rule->power && rule->exact;
     for (int64_t i = 0; i < edges; i++) {
         uint64_t entry[2];
@@ -119,7 +118,7 @@ static int add_row(Gathering *g, const Rule *rule, const char *row, int64_t edge
             return UNKNOWN_CODE;
         double at_ms = (double)(entry[1] >> 16), age_ms = t_ms - at_ms, fresh, crowd_fresh;
         if (plain)
-            fresh = crowd_fresh = age_ms > 0.0 ? decay(age_ms * inverse) : 1.0;
+            fresh = crowd_fresh = age_ms > 0.0 ? decay(age_ms / rule->scale_ms) : 1.0;
         else
             fresh = freshness(rule, age_ms), crowd_fresh = crowd_freshness(rule, age_ms);
         Cell *cell = cell_of(g, entry[0]);

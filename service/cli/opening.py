@@ -10,7 +10,7 @@ from service import log
 from service.addresses import mask_secrets
 from service.embedded import attach_or_start
 from service.errors import StoreUnavailable, WaxwaneError
-from service.settings import Settings, SettingsError
+from service.settings import Settings
 
 if TYPE_CHECKING:
     from service.engine import Engine
@@ -92,10 +92,7 @@ def _store(settings: Settings) -> Iterator[str]:
 def _engine(settings: Settings) -> "Engine":
     from service.engine import Engine  # noqa: PLC0415  it loads numpy and more, which most commands do without
 
-    try:
-        return Engine.from_settings(settings)
-    except OSError as error:
-        raise SettingsError([f"policies: {error.filename} can't be read: {error.strerror}"]) from None
+    return Engine.from_settings(settings)
 
 
 def _start(run: Callable[[Coroutine[Any, Any, None]], None], engine: "Engine", url: str, *, background: bool) -> None:

@@ -1,12 +1,15 @@
 """Cursors: which posts a feed session has served, and at what time and with what chance it is ranked.
 
-A cursor is opaque, bound to its reader and signed with a key of the store.
+A cursor is opaque, bound to its reader and signed with a key of the store. That of a short first page holds the hashes
+of what was served, so that a first page, which is mostly the only one, writes nothing; of later pages the store keeps
+them.
 """
 
 import os
 import struct
 from base64 import urlsafe_b64decode, urlsafe_b64encode
 from binascii import Error as Base64Error
+from collections.abc import Sequence
 from dataclasses import dataclass
 from hashlib import blake2b
 from hmac import compare_digest
@@ -19,8 +22,11 @@ from service.store.connection import Connection
 KEPT_MS = 600_000
 """How long a session's pages are kept after the last, milliseconds."""
 
-_BODY = struct.Struct("<B8sIQBB")
-_VERSION = 1
+CARRIED = 48
+"""The most posts that a first page's cursor holds itself."""
+
+_BODY = struct.Struct("<B8sIQQBBB")
+_VERSION = 2
 _SIGNATURE_BYTES = 12
 _ORDERS: tuple[Order, ...] = ("ranked", "newest")
 
@@ -36,6 +42,7 @@ class Session:
         order: of all pages.
         explore: whether randomness is on.
         policy: name of the policy.
+        carried: hashes of what the first page served, as far as its cursor holds them.
 
     """
 
@@ -45,6 +52,7 @@ class Session:
     order: Order
     explore: bool
     policy: str
+    carried: tuple[bytes, ...] = ()
 
     @property
     def seed(self) -> int:
@@ -70,19 +78,19 @@ class CursorBook:
         self._connection = connection
         self._secret = secret
 
-    def write(self, session: Session, reader: str, offset: int) -> str:
-        """Write the cursor of the page that starts at `offset`."""
-        body = _BODY.pack(
-            _VERSION, session.key, offset, session.as_of_ms, _ORDERS.index(session.order), int(session.explore)
-        )
-        body += session.policy.encode()
+    def write(self, session: Session, reader: str, offset: int, carried: Sequence[bytes], now_ms: int) -> str:
+        """Write the cursor of the page that starts at `offset`; `carried` are the posts it holds itself."""
+        order, explore = _ORDERS.index(session.order), int(session.explore)
+        body = _BODY.pack(_VERSION, session.key, offset, session.as_of_ms, now_ms, order, explore, len(carried))
+        body += b"".join(carried) + session.policy.encode()
         return urlsafe_b64encode(self._sign(body, reader) + body).rstrip(b"=").decode()
 
-    def read(self, request: FeedRequest) -> Session:
+    def read(self, request: FeedRequest, now_ms: int) -> Session:
         """Read the cursor of a request. The time of its first page holds for all pages, whatever `as_of` says.
 
         Raises:
             CursorInvalid: it is not one of ours, or the request asks for something else than its feed.
+            CursorExpired: it is too old.
 
         """
         cursor = request.cursor or ""
@@ -93,12 +101,16 @@ class CursorBook:
         signature, body = data[:_SIGNATURE_BYTES], data[_SIGNATURE_BYTES:]
         if len(body) < _BODY.size or not compare_digest(signature, self._sign(body, request.reader)):
             raise CursorInvalid(cursor, "it was changed, or it belongs to another reader")
-        version, key, offset, as_of_ms, order, explore = _BODY.unpack_from(body)
+        version, key, offset, as_of_ms, issued_ms, order, explore, count = _BODY.unpack_from(body)
         if version != _VERSION:
             raise CursorInvalid(cursor)
-        session = Session(key, offset, as_of_ms, _ORDERS[order], bool(explore), body[_BODY.size :].decode())
+        policy_at = _BODY.size + 8 * count
+        carried = tuple(body[at : at + 8] for at in range(_BODY.size, policy_at, 8))
+        session = Session(key, offset, as_of_ms, _ORDERS[order], bool(explore), body[policy_at:].decode(), carried)
         if request.order != session.order or request.policy not in (None, session.policy):
             raise CursorInvalid(cursor, "order and policy must be those of its first page")
+        if now_ms - issued_ms > KEPT_MS:
+            raise CursorExpired(cursor)
         return session
 
     async def served(self, session: Session, cursor: str) -> list[bytes]:
@@ -110,6 +122,8 @@ class CursorBook:
 
         """
         data = await self._connection.read("GET", keys.key("page", session.key))
+        if data is None and len(session.carried) == session.offset:
+            return list(session.carried)
         if data is None or len(data) < 8 * session.offset:
             raise CursorExpired(cursor)
         return [data[at : at + 8] for at in range(0, len(data), 8)]

@@ -14,7 +14,7 @@ from scoring.gathering import Bounds, Gathering, Reader
 from scoring.ranking import Ranking, UnknownCodeError
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
-from service.feed.pages import CursorBook, Session, new_session
+from service.feed.pages import CARRIED, CursorBook, Session, new_session
 from service.feed.policies import PolicyBook, PreparedPolicy
 from service.feed.readers import Readers, ReaderState, Standing, hash_number
 from service.feed.reads import Reads
@@ -98,7 +98,7 @@ class Ranker:
         """
         deadline = Deadline(request.budget_ms or self._budget_ms, arrived_s)
         session, served = await self._session(request, now_ms)
-        return await self.with_all_kinds(lambda: self._page(request, session, served, deadline))
+        return await self.with_all_kinds(lambda: self._page(request, session, served, deadline, now_ms))
 
     async def with_all_kinds(self, read: Callable[[], Awaitable[Answer]]) -> Answer:
         """Read, and once more where another worker has registered a kind meanwhile."""
@@ -109,12 +109,12 @@ class Ranker:
             return await read()
 
     async def _page(
-        self, request: FeedRequest, session: Session, served: list[bytes], deadline: Deadline
+        self, request: FeedRequest, session: Session, served: list[bytes], deadline: Deadline, now_ms: int
     ) -> FeedAnswer:
         profile = session.order == "ranked"
         view, gathering = await self.view(request.reader, session.policy, session.as_of_ms, deadline, profile=profile)
         before, again = served[: session.offset], served[session.offset : session.offset + request.k]
-        await self._bound(session, view, gathering)
+        await self._bound(session, view, gathering, now_ms)
         if again:
             gathering.only(again)
         elif before:
@@ -127,7 +127,8 @@ class Ranker:
             chosen.sort(key=lambda one: places[one.hash])
             more = True
         deadline.stage("shortlist")
-        cursor = await self._next(request, session, served, again or [one.hash for one in chosen], more=more)
+        page = again or [one.hash for one in chosen]
+        cursor = await self._next(request, session, served, page, now_ms) if more else None
         return FeedAnswer(
             reader=request.reader,
             as_of_ms=session.as_of_ms,
@@ -185,18 +186,17 @@ class Ranker:
 
     async def _session(self, request: FeedRequest, now_ms: int) -> tuple[Session, list[bytes]]:
         if request.cursor is not None:
-            session = self._cursors.read(request)
+            session = self._cursors.read(request, now_ms)
             return session, await self._cursors.served(session, request.cursor)
         as_of_ms = now_ms if request.as_of_ms is None else max(request.as_of_ms, now_ms)
         return new_session(request, as_of_ms, request.policy or self._policies.default), []
 
-    async def _bound(self, session: Session, view: View, gathering: Gathering) -> None:
+    async def _bound(self, session: Session, view: View, gathering: Gathering, now_ms: int) -> None:
         """Bound what the candidates stand in order by."""
         if session.order == "newest":
             gathering.by_newest()
             return
-        board = view.prepared.board
-        crowd = board.bound(*await self.reads.board(board, session.as_of_ms), session.as_of_ms)
+        crowd = await self.reads.crowd(view.prepared.board, session.as_of_ms, now_ms)
         policy = view.ranking.policy
         gathering.bound(
             Bounds(
@@ -241,15 +241,15 @@ class Ranker:
         return [record.author_hash if record else b"" for record in records]
 
     async def _next(
-        self, request: FeedRequest, session: Session, served: list[bytes], page: list[bytes], *, more: bool
-    ) -> str | None:
-        """Keep the page and write the cursor of the one after it."""
-        if not more:
-            return None
+        self, request: FeedRequest, session: Session, served: list[bytes], page: list[bytes], now_ms: int
+    ) -> str:
+        """Write the cursor of the page after this one, and keep this one where the cursor can't hold it."""
         end = session.offset + len(page)
+        if not session.offset and end <= CARRIED:
+            return self._cursors.write(session, request.reader, end, page, now_ms)
         if end > len(served):
             await self._cursors.keep(session, served[: session.offset] + page)
-        return self._cursors.write(session, request.reader, end)
+        return self._cursors.write(session, request.reader, end, [], now_ms)
 
     async def _without_erased(self, view: View, gathering: Gathering, t_ms: int) -> tuple[View, Gathering]:
         """Gather anew without the reader's dealings with people since erased, where there are any."""

@@ -4,7 +4,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import cast
 
-from service.feed.board import BoardReader, BoardState
+from service.feed.board import BoardReader, BoardState, CrowdBound
 from service.feed.cache import Recent, Watch, WorkerCache
 from service.store import keys
 from service.store.connection import Connection
@@ -14,11 +14,25 @@ _BOARD_AGE_MS = 1000
 _BOARD_CHANGES = 2000
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)
 class _HeldBoard:
+    """A board as it was read, and what it came to for a policy the last time."""
+
     state: BoardState
     watch: Watch
     fetched_ms: int
+    policy: BoardReader | None = None
+    t_ms: int = 0
+    unknown: int = 0
+    bound: CrowdBound | None = None
+
+    def bound_for(self, policy: BoardReader, t_ms: int) -> CrowdBound:
+        """Bound the crowd at a time; a bound for a little earlier holds too, as all sums only fall."""
+        unknown = len(self.watch.changed)
+        if self.bound is None or policy is not self.policy or unknown != self.unknown or t_ms < self.t_ms:
+            self.policy, self.t_ms, self.unknown = policy, t_ms, unknown
+            self.bound = policy.bound(self.state, self.watch.changed, t_ms)
+        return self.bound
 
 
 def _present(values: list[bytes | None]) -> list[bytes]:
@@ -94,12 +108,12 @@ class Reads:
             return cast("list[bytes]", values)
         hashes = [one for one, value in zip(wanted, values, strict=True) if value is None]
         ticket = self._cache.follower.ticket()
-        fetched = _present(await self._connection.mget(keys.keys(name, hashes)))
+        fetched = _present((await self._connection.read_packed(keys.packed_mget(name, hashes), 1))[0])
         self._cache.keep(remembered, ticket, zip(hashes, fetched, strict=True))
         return _filled(values, fetched)
 
-    async def board(self, reader: BoardReader, now_ms: int) -> tuple[BoardState, set[bytes]]:
-        """Give a board as it was at most a second ago, and the posts that have changed since.
+    async def crowd(self, reader: BoardReader, t_ms: int, now_ms: int) -> CrowdBound:
+        """Bound the crowd at a time, by a board as it was at most a second ago, and what has changed since.
 
         Raises:
             StoreUnavailable: the store does not answer.
@@ -107,13 +121,13 @@ class Reads:
         """
         held = self._boards.get(reader.slot)
         if held is not None and self._still_good(held, now_ms):
-            return held.state, held.watch.changed
+            return held.bound_for(reader, t_ms)
         if held is not None:
             self._cache.stop(held.watch)
         watch = self._cache.watch()
         state = reader.read(await self._connection.read_many(reader.commands()))
-        self._boards[reader.slot] = _HeldBoard(state, watch, now_ms)
-        return state, watch.changed
+        held = self._boards[reader.slot] = _HeldBoard(state, watch, now_ms)
+        return held.bound_for(reader, t_ms)
 
     def _still_good(self, held: _HeldBoard, now_ms: int) -> bool:
         young = 0 <= now_ms - held.fetched_ms < _BOARD_AGE_MS

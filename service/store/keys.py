@@ -38,6 +38,9 @@ from service.store.ids import bucket
 _PERSON = ("row", "ids", "who", "name", "erased", "tie", "out", "in", "mark", "seen", "heard", "undo", "posts")
 _POST = ("post", "wait")
 _PREFIX = {name: [f"{name}:{{{number}}}:".encode() for number in range(128)] for name in (*_PERSON, *_POST, "page")}
+_PACKED = {
+    name: [b"\r\n$%d\r\n%b" % (len(prefix) + 8, prefix) for prefix in prefixes] for name, prefixes in _PREFIX.items()
+}
 
 CHANGES = b"changes:{log}"
 CHANGED = b"changed:{log}"
@@ -60,6 +63,20 @@ def keys(name: str, hashes: list[bytes]) -> list[bytes]:
     """Build one key for each hash."""
     prefix = _PREFIX[name]
     return [prefix[id_hash[0] & 127] + id_hash for id_hash in hashes]
+
+
+def packed_mget(name: str, hashes: list[bytes]) -> bytes:
+    r"""Write an MGET of one key for each hash, in the protocol of Redis.
+
+    Hundreds of keys are asked for in one read, so they are not built first and packed afterwards.
+
+    >>> packed_mget("row", [bytes([130, 0, 0, 0, 0, 0, 0, 7])])
+    b'*2\r\n$4\r\nMGET\r\n$16\r\nrow:{2}:\x82\x00\x00\x00\x00\x00\x00\x07\r\n'
+
+    """
+    prefix = _PACKED[name]
+    parts = b"".join([prefix[id_hash[0] & 127] + id_hash for id_hash in hashes])
+    return b"*%d\r\n$4\r\nMGET%b\r\n" % (len(hashes) + 1, parts)
 
 
 def seq(number: int) -> bytes:

@@ -1,0 +1,1 @@
+"""Feed reads timed side by side with what one would otherwise put together: `python -m loadtests.peers`."""

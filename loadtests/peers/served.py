@@ -1,0 +1,125 @@
+"""waxwane over HTTP: a served process, a bare client on one connection, and the process's CPU."""
+
+import http.client
+import json
+import os
+import socket
+import subprocess
+import sys
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+
+_TICKS = os.sysconf("SC_CLK_TCK")
+
+
+@dataclass(frozen=True)
+class Served:
+    """A running service: where it listens, and its process's number."""
+
+    port: int
+    pid: int
+
+    def cpu_s(self) -> float:
+        """Return the CPU that the process has used, seconds."""
+        fields = Path(f"/proc/{self.pid}/stat").read_text(encoding="ascii").rpartition(") ")[2].split()
+        return (int(fields[11]) + int(fields[12])) / _TICKS
+
+
+@contextmanager
+def serve(store: str, *options: str) -> Iterator[Served]:
+    """Run `waxwane serve` with one worker on a store."""
+    with socket.socket() as free:
+        free.bind(("127.0.0.1", 0))
+        port = free.getsockname()[1]
+    program = [sys.executable, "-c", "from service.cli.main import main; main()"]
+    command = [*program, "serve", "--store", store, "--port", str(port), *options]
+    environment = {name: value for name, value in os.environ.items() if not name.startswith("WAXWANE_")}
+    child = subprocess.Popen(command, stderr=subprocess.DEVNULL, env=environment)
+    try:
+        _wait_until_ready(port, child)
+        yield Served(port, child.pid)
+    finally:
+        child.terminate()
+        child.wait()
+
+
+def _wait_until_ready(port: int, child: subprocess.Popen[bytes]) -> None:
+    until_s = time.monotonic() + 30.0
+    while time.monotonic() < until_s and child.poll() is None:
+        try:
+            connection = http.client.HTTPConnection("127.0.0.1", port, timeout=5)
+            connection.request("GET", "/readyz")
+            if connection.getresponse().status == 200:  # noqa: PLR2004  what ready means
+                return
+        except OSError:
+            time.sleep(0.05)
+    raise SystemExit("the service did not get ready")
+
+
+class Client:
+    """Sends requests on one connection and waits for each answer, with as little work as may be."""
+
+    def __init__(self, port: int) -> None:
+        self._socket = socket.create_connection(("127.0.0.1", port))
+        self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+
+    def get(self, path: str) -> bytes:
+        """Send a GET and return the body of its answer."""
+        return self._ask(f"GET {path} HTTP/1.1\r\nHost: localhost\r\n\r\n".encode())
+
+    def post(self, path: str, body: bytes, media_type: str = "application/json") -> bytes:
+        """Send a POST and return the body of its answer."""
+        head = f"POST {path} HTTP/1.1\r\nHost: localhost\r\nContent-Type: {media_type}\r\n"
+        return self._ask(f"{head}Content-Length: {len(body)}\r\n\r\n".encode() + body)
+
+    def close(self) -> None:
+        """Hang up."""
+        self._socket.close()
+
+    def _ask(self, request: bytes) -> bytes:
+        self._socket.sendall(request)
+        answer = b""
+        while b"\r\n\r\n" not in answer:
+            answer += self._received()
+        head, _, body = answer.partition(b"\r\n\r\n")
+        status, *fields = head.lower().split(b"\r\n")
+        length = next(int(field[16:]) for field in fields if field.startswith(b"content-length:"))
+        while len(body) < length:
+            body += self._received()
+        if b" 200 " not in status:
+            raise SystemExit(f"{status.decode()}: {body[:300].decode(errors='replace')}")
+        return body
+
+    def _received(self) -> bytes:
+        data = self._socket.recv(1 << 16)
+        if not data:
+            raise SystemExit("the service hung up")
+        return data
+
+
+def read_feeds(served: Served, reader: str, reads: int) -> dict[str, float]:
+    """Read a feed again and again; returns times in microseconds."""
+    client, path = Client(served.port), f"/v1/feeds/{reader}?k=20&budget_ms=1000"
+    for _ in range(reads // 5):
+        page = json.loads(client.get(path))
+        if not page["complete"]:
+            raise SystemExit("a feed over HTTP is not complete")
+    cpu_s, times = served.cpu_s(), []
+    for _ in range(reads):
+        begun_s = time.perf_counter()
+        client.get(path)
+        times.append(time.perf_counter() - begun_s)
+    cpu_s = served.cpu_s() - cpu_s
+    client.close()
+    times.sort()
+    return {
+        "p50_us": times[reads // 2] * 1e6,
+        "p99_us": times[int(reads * 0.99)] * 1e6,
+        "cpu_us": cpu_s / reads * 1e6,
+    }
+
+
+__all__ = ["Client", "Served", "read_feeds", "serve"]

@@ -1,0 +1,117 @@
+"""All ways over one world: checked equal first, then timed in turns."""
+
+import statistics
+import time
+from collections.abc import Awaitable, Callable
+from typing import Any
+
+from loadtests.peers import postgres, served
+from loadtests.peers.ways import Top, Way, floor, know_by, plain_python, redis_alone
+from loadtests.peers.world import READER, TOP, Columns, Shape, columns, load, started
+from loadtests.reference import events
+from service.embedded import EmbeddedServer
+from service.engine import Engine
+from service.feed.types import FeedRequest
+
+FLOOR, COLD, WARM = "floor", "waxwane, cold rows", "waxwane, warm rows"
+SLOW = {"plain Python": 20, "PostgreSQL, one SELECT": 4, "Redis alone, ZUNIONSTORE": 4}
+"""Ways that are timed in every so many rounds only."""
+
+
+def close_enough(one: Top, other: Top) -> bool:
+    """Say whether two answers agree: the same scores to 1e-9 in the same order, the same posts where scores differ."""
+    if len(one) != len(other):
+        return False
+    for (post, score), (twin, value) in zip(one, other, strict=True):
+        if abs(score - value) > 1e-9 * abs(score):
+            return False
+        if post != twin and not any(name == twin and abs(mine - value) <= 1e-9 * abs(mine) for name, mine in one):
+            return False
+    return True
+
+
+async def top_of(engine: Engine, t_ms: int) -> Top:
+    """Give waxwane's answer."""
+    answer = await engine.feed(FeedRequest(READER, k=TOP, budget_ms=10_000.0), t_ms)
+    if not answer.complete:
+        raise SystemExit("waxwane's answer is not complete")
+    return [(item.post, item.score or 0.0) for item in answer.items]
+
+
+async def compare(server: EmbeddedServer, shape: Shape, rounds: int) -> dict[str, Any]:
+    """Load a world into every way, check that all agree, time them in turns."""
+    t_ms = time.time_ns() // 1_000_000
+    world = columns(shape, t_ms)
+    warm = await started(server.url)
+    await load(warm, list(events(shape, t_ms)), t_ms)
+    cold = await started(server.url, cache_bytes=0)
+    with postgres.server() as address:
+        ways = await _ways(server.url.removeprefix("unix://"), warm, world, address)
+        expected = await top_of(warm, t_ms)
+        for engine in (cold, warm):
+            if not close_enough(expected, await top_of(engine, t_ms)):
+                raise SystemExit("waxwane's cold and warm answers differ")
+        for way in ways:
+            if way.top is not None and not close_enough(expected, way.top()):
+                raise SystemExit(f"the answer of {way.name} is not waxwane's")
+        times = await _timed(ways, {COLD: cold, WARM: warm}, t_ms, rounds)
+    with served.serve(server.url) as process:
+        http = served.read_feeds(process, READER, max(200, 4 * rounds))
+    await warm.close()
+    await cold.close()
+    rows = {name: _summary(values) for name, values in times.items()}
+    if address is None:
+        rows["PostgreSQL, one SELECT"] = None
+    candidates = len(set(world.post[[bool(value) for value in world.affinity[world.person]]].tolist()))
+    edges = int((world.affinity[world.person] > 0).sum())
+    return {"edges": edges, "candidates": candidates, "rows": rows, "http": http, "agreed": [way.name for way in ways]}
+
+
+async def _ways(path: str, engine: Engine, world: Columns, address: str | None) -> list[Way]:
+    ranker, hasher = engine._ranker, engine.store.hasher  # noqa: SLF001  the same rows as the engine reads
+    state = await ranker._readers.load(READER, hasher.hash(READER), profile=True)  # noqa: SLF001  as above
+    ranking = ranker._policies.prepared(None, engine.store.kinds.names).ranking  # noqa: SLF001  as above
+    standing = ranker._readers.standing(state, ranking, world.t_ms)  # noqa: SLF001  as above
+    ways = [floor(path, standing, ranking, world.t_ms), redis_alone(path, world)]
+    ways.append(plain_python(path, standing, ranking, world))
+    for know in know_by.values():
+        know(hasher.hash)
+    if address is not None:
+        ways.append(postgres.way(address, world))
+    return ways
+
+
+async def _timed(ways: list[Way], engines: dict[str, Engine], t_ms: int, rounds: int) -> dict[str, list[float]]:
+    request = FeedRequest(READER, k=20, budget_ms=10_000.0)
+    calls: dict[str, Callable[[], Awaitable[object]]] = {
+        name: (lambda engine=engine: engine.feed(request, t_ms)) for name, engine in engines.items()
+    }
+    times: dict[str, list[float]] = {name: [] for name in [*(way.name for way in ways), *calls]}
+    for number in range(-5, rounds):
+        for way in ways:
+            if number % SLOW.get(way.name, 1):
+                continue
+            begun_s = time.perf_counter()
+            way.read()
+            _note(times[way.name], number, begun_s)
+        for name, call in calls.items():
+            begun_s = time.perf_counter()
+            await call()
+            _note(times[name], number, begun_s)
+    return times
+
+
+def _note(values: list[float], number: int, begun_s: float) -> None:
+    taken_s = time.perf_counter() - begun_s
+    if number >= 0:
+        values.append(taken_s)
+
+
+def _summary(values: list[float]) -> dict[str, float]:
+    ordered = sorted(values)
+    return {
+        "reads": len(ordered),
+        "least_us": ordered[0] * 1e6,
+        "p50_us": statistics.median(ordered) * 1e6,
+        "p90_us": ordered[int(0.9 * (len(ordered) - 1))] * 1e6,
+    }
