@@ -2,6 +2,7 @@
 
 import re
 from datetime import UTC, date, datetime, timedelta
+from functools import lru_cache
 
 ALLOWED = (
     "an RFC 3339 time with an offset, such as 2026-05-04T09:00:00Z, or an integer of Unix milliseconds, "
@@ -106,4 +107,13 @@ def format_ms(at_ms: int) -> str:
     >>> format_ms(1777885200000)
     '2026-05-04T09:00:00.000Z'
     """
-    return (_EPOCH + timedelta(milliseconds=at_ms)).isoformat(timespec="milliseconds")[:-6] + "Z"
+    days, in_day = divmod(at_ms, 86_400_000)
+    seconds, millis = divmod(in_day, 1000)
+    minutes, second = divmod(seconds, 60)
+    return f"{_date(days)}T{minutes // 60:02}:{minutes % 60:02}:{second:02}.{millis:03}Z"
+
+
+@lru_cache(maxsize=4096)
+def _date(days: int) -> str:
+    """Write a date, given as days since 1970; most times that are written fall on few dates."""
+    return (_EPOCH + timedelta(days=days)).date().isoformat()

@@ -1,34 +1,52 @@
 """GET /v1/feeds/…: a reader's feed, and why a post has its score."""
 
-from typing import Annotated
+from collections.abc import Callable, Coroutine
+from typing import Annotated, Any
 
 import orjson
 from fastapi import APIRouter, Query, Request
+from fastapi.routing import APIRoute
 from starlette.responses import Response
 
 from service.feed.answers import explanation_document, page_document
 from service.feed.types import ExplainRequest, FeedRequest
 from service.web import clock, documents, schemas
 from service.web.middleware import arrived_s
-from service.web.parameters import ExplainQuery, FeedQuery, PathId, as_of_within, known_only
+from service.web.parameters import ExplainQuery, FeedQuery, PathId, as_of_within, feed_query, known_only, path_id
 from service.web.state import state_of
 
+
+class FeedRoute(APIRoute):
+    """The route of feed reads: described as all others, its parameters read by `parameters.feed_query`."""
+
+    def get_route_handler(self) -> Callable[[Request], Coroutine[Any, Any, Response]]:
+        """Give what handles a request."""
+
+        async def handle(request: Request) -> Response:
+            return await read_feed(request, path_id(request, "reader"), feed_query(request))
+
+        return handle
+
+
 router = APIRouter()
+_feeds = APIRouter(route_class=FeedRoute)
 
 
-@router.get(
+@_feeds.get(
     "/v1/feeds/{reader:id}",
     summary="Read a feed",
     responses=documents.answers(schemas.FeedPage, 400, 410, 422, 429, 503, headers=documents.SERVER_TIMING),
 )
 async def read_feed(request: Request, reader: PathId, query: Annotated[FeedQuery, Query()]) -> Response:
     """Rank the reader's next posts; a reader never heard of gets a feed too."""
-    known_only(request, FeedQuery.model_fields)
     now_ms = clock.now_ms()
     feed_request = _feed_request(reader, query, now_ms)
     answer = await state_of(request).engine.feed(feed_request, now_ms, arrived_s(request.scope))
     headers = {"Server-Timing": _server_timing(answer.stages_ms, clock.since_ms(arrived_s(request.scope)))}
     return Response(orjson.dumps(page_document(answer)), headers=headers, media_type="application/json")
+
+
+router.include_router(_feeds)
 
 
 @router.get(
