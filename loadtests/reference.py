@@ -31,7 +31,7 @@ class Shape:
     ties: int = 300
     edges: int = 60
     own_posts: int = 30
-    strangers: int = 2_000
+    strangers: int = 8_000
     crowd_edges: int = 20_000
     seed: int = 7
 

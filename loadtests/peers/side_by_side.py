@@ -14,8 +14,11 @@ from service.engine import Engine
 from service.feed.types import FeedRequest
 
 FLOOR, COLD, WARM = "floor", "waxwane, cold rows", "waxwane, warm rows"
-SLOW = {"plain Python": 20, "PostgreSQL, one SELECT": 4, "Redis alone, ZUNIONSTORE": 4}
-"""Ways that are timed in every so many rounds only."""
+SLOW = frozenset({"plain Python", "PostgreSQL, one SELECT", "Redis alone, ZUNIONSTORE"})
+"""Ways that take so long that a turn of theirs has fewer reads."""
+
+A_TURN, A_SLOW_TURN = 20, 4
+"""Reads of a way before the next has its turn; the first of a turn, which finds another's memory, is not counted."""
 
 
 def close_enough(one: Top, other: Top) -> bool:
@@ -54,12 +57,11 @@ async def compare(server: EmbeddedServer, shape: Shape, rounds: int) -> dict[str
         for way in ways:
             if way.top is not None and not close_enough(expected, way.top()):
                 raise SystemExit(f"the answer of {way.name} is not waxwane's")
-        times = await _timed(ways, {COLD: cold, WARM: warm}, t_ms, rounds)
+        rows = await _timed(ways, {COLD: cold, WARM: warm}, t_ms, rounds)
     with served.serve(server.url) as process:
-        http = served.read_feeds(process, READER, max(200, 4 * rounds))
+        http = served.read_feeds(process, READER, max(400, 20 * rounds))
     await warm.close()
     await cold.close()
-    rows = {name: _summary(values) for name, values in times.items()}
     if address is None:
         rows["PostgreSQL, one SELECT"] = None
     candidates = len(set(world.post[[bool(value) for value in world.affinity[world.person]]].tolist()))
@@ -81,35 +83,37 @@ async def _ways(path: str, engine: Engine, world: Columns, address: str | None) 
     return ways
 
 
-async def _timed(ways: list[Way], engines: dict[str, Engine], t_ms: int, rounds: int) -> dict[str, list[float]]:
+async def _timed(ways: list[Way], engines: dict[str, Engine], t_ms: int, rounds: int) -> dict[str, Any]:
     request = FeedRequest(READER, k=20, budget_ms=10_000.0)
     calls: dict[str, Callable[[], Awaitable[object]]] = {
         name: (lambda engine=engine: engine.feed(request, t_ms)) for name, engine in engines.items()
     }
     times: dict[str, list[float]] = {name: [] for name in [*(way.name for way in ways), *calls]}
-    for number in range(-5, rounds):
+    cpu: dict[str, float] = {name: 0.0 for name in times}
+    for _ in range(rounds):
         for way in ways:
-            if number % SLOW.get(way.name, 1):
-                continue
-            begun_s = time.perf_counter()
             way.read()
-            _note(times[way.name], number, begun_s)
+            cpu_s = time.process_time()
+            for _ in range(A_SLOW_TURN if way.name in SLOW else A_TURN):
+                begun_s = time.perf_counter()
+                way.read()
+                times[way.name].append(time.perf_counter() - begun_s)
+            cpu[way.name] += time.process_time() - cpu_s
         for name, call in calls.items():
-            begun_s = time.perf_counter()
             await call()
-            _note(times[name], number, begun_s)
-    return times
+            cpu_s = time.process_time()
+            for _ in range(A_TURN):
+                begun_s = time.perf_counter()
+                await call()
+                times[name].append(time.perf_counter() - begun_s)
+            cpu[name] += time.process_time() - cpu_s
+    return {name: _summary(values, cpu[name]) for name, values in times.items()}
 
 
-def _note(values: list[float], number: int, begun_s: float) -> None:
-    taken_s = time.perf_counter() - begun_s
-    if number >= 0:
-        values.append(taken_s)
-
-
-def _summary(values: list[float]) -> dict[str, float]:
+def _summary(values: list[float], cpu_s: float) -> dict[str, float]:
     ordered = sorted(values)
     return {
+        "cpu_us": cpu_s / len(ordered) * 1e6,
         "reads": len(ordered),
         "least_us": ordered[0] * 1e6,
         "p50_us": statistics.median(ordered) * 1e6,

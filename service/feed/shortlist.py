@@ -11,9 +11,9 @@ FIRST_BATCH = 48
 MOST_AT_ONCE = 2000
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)
 class Found:
-    """A post that the reader may see.
+    """A post that the reader may see (not frozen: that would double what making one costs).
 
     `value` is as stored. `score` is the contract's, seen factor included; `order` is what it stands in order by, with
     randomness.

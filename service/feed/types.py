@@ -32,9 +32,9 @@ class FeedRequest:
     explore: bool = True
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)
 class FeedItem:
-    """One post of a feed; `score` is None where the order is newest first."""
+    """One post of a feed (not frozen: that would double what making one costs); `score` is None where the order is newest first."""
 
     post: str
     author: str

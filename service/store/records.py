@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 from service.store.drive import AUDIENCES
 
 _HEADER = struct.Struct("<BBBBHHHHHHHHdd8s")
+_ITEM = struct.Struct("<3xB4xHH8xd")
 _WITHDRAWN, _RECORDED = 1, 2
 _KIND_HEAD = 16
 
@@ -96,14 +97,15 @@ def author_of(value: bytes) -> bytes:
 
 def read_item(value: bytes) -> tuple[str, str, str, int]:
     """Read what a feed shows of a post from its value: id, author, form, and the time of posting, Unix milliseconds."""
-    head = _HEADER.unpack_from(value)
-    post_end = _HEADER.size + head[6]
-    author_end = post_end + head[7]
+    form_n, id_n, author_n, created = _ITEM.unpack_from(value)
+    post_end = _HEADER.size + id_n
+    author_end = post_end + author_n
+    form_end = author_end + form_n
     return (
         value[_HEADER.size : post_end].decode(),
         value[post_end:author_end].decode(),
-        value[author_end : author_end + head[3]].decode(),
-        int(head[12]),
+        value[author_end:form_end].decode(),
+        int(created),
     )
 
 
