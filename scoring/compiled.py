@@ -18,9 +18,17 @@ from numpy.typing import NDArray
 
 LIBRARY: Final = Path(__file__).with_name("_passes.so")
 
-FINE, UNKNOWN_CODE, NO_MEMORY, BROKEN_VALUE = 0, -1, -2, -3
+_FINE, _UNKNOWN_CODE, _NO_MEMORY, _BROKEN_VALUE = 0, -1, -2, -3
 
 _INT, _NUMBER, _ANY = c_int64, c_double, c_void_p
+
+
+class UnknownCodeError(LookupError):
+    """An edge has a kind code that the policy was not compiled for: the kinds have grown since."""
+
+
+class BrokenValueError(ValueError):
+    """A post's value in the store is shorter than it says."""
 
 
 class Rule(Structure):
@@ -74,6 +82,7 @@ _SIGNATURES: Final[dict[str, tuple[Any, tuple[Any, ...]]]] = {
     "judge_certain": (_INT, (_ANY, _NUMBER)),
     "judge_count": (_INT, (_ANY,)),
     "judge_found": (_INT, (_ANY, _INT, _ANY, _ANY, _ANY)),
+    "post_marks": (c_int, (_INT, _ANY, _ANY, _INT, _INT, _ANY, _ANY, _NUMBER, _ANY)),
     "decay": (_NUMBER, (_NUMBER,)),
     "tie_key": (_NUMBER, (_NUMBER,)),
     "crowd_freshness": (_NUMBER, (POINTER(Rule), _NUMBER)),
@@ -115,3 +124,22 @@ def numbers(values: NDArray[np.float64]) -> bytes:
 def hashes(values: NDArray[np.uint64]) -> bytes:
     """Pack hashes."""
     return values.astype("<u8", copy=False).tobytes()
+
+
+def check(status: int) -> None:
+    """Raise what a pass reported.
+
+    Raises:
+        UnknownCodeError: an edge has a kind that the policy was not compiled for.
+        BrokenValueError: a post's value is shorter than it says.
+        MemoryError: there is no memory left.
+
+    """
+    if status == _FINE:
+        return
+    if status == _UNKNOWN_CODE:
+        raise UnknownCodeError
+    if status == _BROKEN_VALUE:
+        raise BrokenValueError
+    assert status == _NO_MEMORY  # noqa: S101  there is no other
+    raise MemoryError

@@ -8,35 +8,28 @@ import ctypes
 from collections.abc import Sequence
 from ctypes import c_double, c_int64, c_uint64
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scoring.affinity import FOLLOW, FRIEND, Circle
 from scoring.compiled import (
-    BROKEN_VALUE,
-    FINE,
-    NO_MEMORY,
-    UNKNOWN_CODE,
     Rule,
     Who,
+    check,
     hashes,
     lengths,
     numbers,
     passes,
 )
-from scoring.ranking import Ranking, UnknownCodeError
+from scoring.ranking import Ranking
 from scoring.reduce import Candidates
 
 _KEPT: Final = 8
 _KEPT_POSTS: Final = 1 << 18
 
 _kept: list[int] = []
-
-
-class BrokenValueError(ValueError):
-    """A post's value in the store is shorter than it says."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,7 +112,7 @@ class Gathering:
             UnknownCodeError: An edge has a kind that the policy was not compiled for.
         """
         ties = ((relation == FOLLOW) | (relation == FRIEND)).tobytes()
-        _check(
+        check(
             passes.gather_add(
                 self._handle,
                 self._rule,
@@ -150,7 +143,7 @@ class Gathering:
 
     def bound(self, bounds: Bounds) -> None:
         """Bound what each candidate stands in order by; the greatest are taken first."""
-        _check(
+        check(
             passes.choose_bounds(
                 self._handle,
                 self._stranger,
@@ -169,7 +162,7 @@ class Gathering:
 
     def by_newest(self) -> None:
         """Take candidates in order of their newest edges by people followed or befriended."""
-        _check(passes.choose_newest(self._handle))
+        check(passes.choose_newest(self._handle))
 
     def without(self, posts: Sequence[bytes]) -> None:
         """Leave posts out."""
@@ -177,7 +170,7 @@ class Gathering:
 
     def only(self, posts: Sequence[bytes]) -> None:
         """Leave out all but these posts."""
-        _check(passes.choose_only(self._handle, len(posts), b"".join(posts)))
+        check(passes.choose_only(self._handle, len(posts), b"".join(posts)))
 
     def take(self, count: int) -> list[bytes]:
         """Return the hashes of up to `count` of the candidates left with the greatest bounds."""
@@ -204,7 +197,7 @@ class Gathering:
         """
         joined = b"".join(values)
         self._values.append(joined)
-        _check(
+        check(
             passes.judge(
                 self._handle,
                 self._rule,
@@ -234,14 +227,3 @@ class Gathering:
         nth, score, order = (c_int64 * count)(), (c_double * count)(), (c_double * count)()
         n = passes.judge_found(self._handle, count, nth, score, order)
         return list(zip(nth[:n], score[:n], order[:n], strict=True))
-
-
-def _check(status: Any) -> None:  # noqa: ANN401  a C integer
-    if status == FINE:
-        return
-    if status == UNKNOWN_CODE:
-        raise UnknownCodeError
-    if status == BROKEN_VALUE:
-        raise BrokenValueError
-    assert status == NO_MEMORY  # noqa: S101  there is no other
-    raise MemoryError

@@ -7,17 +7,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring.bank import Bank, BankFit, fit
-from scoring.compiled import Rule, numbers
+from scoring.compiled import Rule, UnknownCodeError, numbers
 from scoring.curves import HalfLife
 from scoring.policy import Policy
 
 Values = NDArray[np.float64]
 
 _CHECKED_AGES = 1 << 15
-
-
-class UnknownCodeError(LookupError):
-    """An edge has a kind code that the policy was not compiled for: the kinds have grown since."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -9,10 +9,11 @@ import pytest
 import build_passes
 from scoring import compiled
 from scoring.affinity import BLOCK, FOLLOW, FRIEND, MUTE, NONE, Circle
+from scoring.compiled import BrokenValueError, UnknownCodeError
 from scoring.edges import MARKER, RETRACTED
-from scoring.gathering import Bounds, BrokenValueError, Gathering, Reader
+from scoring.gathering import Bounds, Gathering, Reader
 from scoring.noise import multipliers
-from scoring.ranking import Ranking, UnknownCodeError
+from scoring.ranking import Ranking
 from scoring.reduce import reduce_edges, remainder
 from scoring.topk import tie_key
 from service.store.records import read_record

@@ -3,6 +3,7 @@
 import ast
 import inspect
 import re
+import struct
 from collections.abc import Callable, Iterator
 from pathlib import Path
 
@@ -12,14 +13,14 @@ import redis
 from service.embedded import EmbeddedServer
 from service.server_binary import candidates
 from service.store import calls, keys, scripts
-from service.store.calls import Call, EdgeChange, Effect, NewEdge, NewEvent, StoreLimits
+from service.store.calls import Call, EdgeWork, Effect, NewEdge, NewEvent, StoreLimits
 from tests.lua import globals_of, read_header
 
 FOLDER = Path(inspect.getfile(scripts)).parent / "scripts"
 NAMES = scripts.names()
 PIECES = sorted(path.stem for path in (FOLDER / "lib").glob("*.lua"))
 NOW_MS = 1_777_885_200_000
-LIMITS = StoreLimits(86_400_000, 86_400_000, "3600000,86400000", "1,2", 2)
+LIMITS = StoreLimits(86_400_000, 86_400_000, struct.pack("<2d", 3.6e6, 8.64e7), 2)
 ALLOWED_GLOBALS = {
     *("redis", "struct", "KEYS", "ARGV"),
     *("string", "table", "math", "tonumber", "ipairs", "unpack"),
@@ -29,14 +30,19 @@ A, B, C = (bytes([number]) * 8 for number in (1, 2, 3))
 EFFECT = Effect(5, "e", 9, 8)
 EVENT = NewEvent(A, "mina", B, NOW_MS, b"piece")
 EDGE = NewEdge(A, B * 2, b"piece")
-PLUS = EdgeChange("+", B, A)
+PLUS = b"+" + B + A
 WRITE = calls.PostWrite(A, "bed", B, "mina", NOW_MS, "e1", 0, "note", "beans", 1)
 TIE = calls.TieWrite(A, B, "joel", NOW_MS, 1, "e2")
 
 SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] = {
     "add_edges": (
-        lambda: calls.add_edges(EFFECT, 1, NOW_MS, LIMITS, [(A, "bed", [PLUS, PLUS]), (B, "", [PLUS])]),
-        (2,),
+        lambda: calls.add_edges(
+            1,
+            NOW_MS,
+            LIMITS,
+            [EdgeWork(EFFECT, [(A, "bed", PLUS * 2), (B, "", PLUS)]), EdgeWork(EFFECT, [(C, "", PLUS)])],
+        ),
+        (3,),
         (2, 3),
     ),
     "drop_relation": (lambda: calls.drop_relation(EFFECT, 1, ("in", "mark"), [A, B, C], A, NOW_MS), (3,), ()),
@@ -48,7 +54,7 @@ SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] 
     "put_outgoing": (lambda: calls.put_outgoing(9, TIE, NOW_MS), (), ()),
     "put_post": (lambda: calls.put_post(EFFECT, WRITE, NOW_MS, LIMITS), (), ()),
     "register_kinds": (lambda: calls.register_kinds(["like", "share", "hide"], 9), (), (3,)),
-    "settle_event": (lambda: calls.settle_event(A, 9), (), ()),
+    "settle_event": (lambda: calls.settle_event(A, 9, B), (), ()),
     "settle_interactions": (
         lambda: calls.settle_interactions(1, 9, [(A, [(B, C), (C, b"")]), (B, [(A, b"-")])]),
         (2,),

@@ -52,7 +52,7 @@ def _wait_until_ready(port: int, child: subprocess.Popen[bytes]) -> None:
         try:
             connection = http.client.HTTPConnection("127.0.0.1", port, timeout=5)
             connection.request("GET", "/readyz")
-            if connection.getresponse().status == 200:  # noqa: PLR2004  what ready means
+            if connection.getresponse().status == 200:
                 return
         except OSError:
             time.sleep(0.05)

@@ -89,7 +89,7 @@ async def _timed(ways: list[Way], engines: dict[str, Engine], t_ms: int, rounds:
         name: (lambda engine=engine: engine.feed(request, t_ms)) for name, engine in engines.items()
     }
     times: dict[str, list[float]] = {name: [] for name in [*(way.name for way in ways), *calls]}
-    cpu: dict[str, float] = {name: 0.0 for name in times}
+    cpu: dict[str, float] = dict.fromkeys(times, 0.0)
     for _ in range(rounds):
         for way in ways:
             way.read()

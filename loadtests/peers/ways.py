@@ -83,10 +83,8 @@ def redis_alone(path: str, world: Columns) -> Way:
     pipe.execute()
     line.ask(pack([b"SELECT", 9]))
     weights = [repr(affinity - world.stranger) for affinity in world.affinity[tied].tolist()]
-    union = pack(
-        ["ZUNIONSTORE", "scores", len(tied) + 1, *(f"by:{person}" for person in tied.tolist()), "crowd", "WEIGHTS"]
-        + [*weights, repr(world.stranger)]
-    )
+    sets = [f"by:{person}" for person in tied.tolist()]
+    union = pack(["ZUNIONSTORE", "scores", len(sets) + 1, *sets, "crowd", "WEIGHTS", *weights, repr(world.stranger)])
     best = pack(["ZREVRANGE", "scores", 0, TOP - 1, "WITHSCORES"])
     candidates = set(world.post[np.isin(world.person, tied)].tolist())
 

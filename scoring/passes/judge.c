@@ -1,51 +1,16 @@
-/* Judging: posts that were looked up, their crowd, their score, and whether the reader may see them.
- *
- * A post's value is laid out as service/store/scripts/lib/post.lua writes it. */
+/* Judging: posts that were looked up, their crowd, their score, and whether the reader may see them. */
 #include "passes.h"
+#include "posts.h"
 #include <math.h>
 #include <stdlib.h>
 #include <string.h>
 
-#define HEADER 44
 #define WITHDRAWN 1
 #define RECORDED 2
-#define KIND_HEAD 16
 #define SLACK (1.0 + 1e-9)
 
 enum { NO_TIE, FOLLOW, FRIEND, MUTE, BLOCK };
 enum { EVERYONE, FOLLOWERS, FRIENDS };
-
-typedef struct {
-    int flags, audience;
-    int64_t edges, kinds, id_length, edges_at, sums_at;
-    uint64_t author;
-    double posted_ms;
-} Post;
-
-static int64_t u16(const char *at) {
-    uint16_t value;
-    memcpy(&value, at, sizeof value);
-    return value;
-}
-
-static double f64(const char *at) {
-    double value;
-    memcpy(&value, at, sizeof value);
-    return value;
-}
-
-static int read_post(const char *value, int64_t length, int64_t terms, Post *post) {
-    if (length < HEADER)
-        return BROKEN_VALUE;
-    post->flags = (unsigned char)value[1], post->audience = (unsigned char)value[2];
-    post->edges = u16(value + 4), post->kinds = u16(value + 6), post->id_length = u16(value + 8);
-    int64_t texts = (unsigned char)value[3] + post->id_length + u16(value + 10) + u16(value + 12) + u16(value + 14);
-    post->edges_at = HEADER + texts + 8 * u16(value + 16);
-    post->sums_at = post->edges_at + 8 * post->edges;
-    post->posted_ms = f64(value + 20);
-    memcpy(&post->author, value + 36, sizeof post->author);
-    return post->sums_at + post->kinds * (KIND_HEAD + 8 * terms) <= length ? FINE : BROKEN_VALUE;
-}
 
 static int relation_to(const Who *who, uint64_t person) {
     int64_t low = 0, high = who->people;
@@ -150,7 +115,7 @@ int judge(Gathering *g, const Rule *rule, const Who *who, int64_t count, const u
         found->key = tie_key(found->order);
         found->posted_ms = post.posted_ms;
         found->nth = nth;
-        found->id_length = post.id_length, found->id = values + HEADER;
+        found->id_length = post.id_length, found->id = values + POST_HEADER;
     }
     return FINE;
 }

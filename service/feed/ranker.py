@@ -9,9 +9,10 @@ from numpy.typing import NDArray
 
 from scoring.affinity import Circle
 from scoring.arrange import keep_apart
+from scoring.compiled import UnknownCodeError
 from scoring.edges import EdgeRows, erasures, join_rows, live
 from scoring.gathering import Bounds, Gathering, Reader
-from scoring.ranking import Ranking, UnknownCodeError
+from scoring.ranking import Ranking
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
 from service.feed.pages import CARRIED, CursorBook, Session, new_session

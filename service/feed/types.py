@@ -34,7 +34,10 @@ class FeedRequest:
 
 @dataclass(slots=True)
 class FeedItem:
-    """One post of a feed (not frozen: that would double what making one costs); `score` is None where the order is newest first."""
+    """One post of a feed; `score` is None where the order is newest first.
+
+    Not frozen: that would double what making one costs.
+    """
 
     post: str
     author: str

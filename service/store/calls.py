@@ -51,8 +51,7 @@ class StoreLimits:
     Args:
         ttl_ms: lifetime of what retention bounds, milliseconds: retention and a day.
         retention_ms: age at which edges may be forgotten, milliseconds.
-        half_lives: the bank, milliseconds, with commas.
-        boards: slots of the bank that have a board, with commas, from 1.
+        half_lives: the bank, milliseconds, packed as doubles.
         bank_size: number of half-lives.
         row_edges: most edges a person may have within retention.
         ties: most ties a person may declare.
@@ -63,8 +62,7 @@ class StoreLimits:
 
     ttl_ms: int
     retention_ms: int
-    half_lives: str
-    boards: str
+    half_lives: bytes
     bank_size: int
     row_edges: int = 200_000
     ties: int = 20_000
@@ -97,12 +95,18 @@ class NewEvent:
 
 
 @dataclass(frozen=True, slots=True)
-class EdgeChange:
-    """Add (`+`) or take away (`-`) one edge of a post."""
+class EdgeWork:
+    """What one outbox entry changes in the sums of the posts of one bucket.
 
-    sign: str
-    stamp: bytes
-    actor: bytes
+    Args:
+        effect: lets it through once.
+        posts: for each post its hash, its id ('' unknown) and the changes: 17 bytes each, `+` or `-` for an edge to add
+            or to take away, its stamp, its actor's hash.
+
+    """
+
+    effect: Effect
+    posts: Sequence[tuple[bytes, str, bytes]]
 
 
 def take_interactions(
@@ -187,21 +191,16 @@ def sweep_person(person: bytes, id_hash: bytes, until_ms: int, seq: int, now_ms:
     return Call(load("sweep_person"), script_keys, args)
 
 
-def add_edges(
-    effect: Effect,
-    number: int,
-    now_ms: int,
-    limits: StoreLimits,
-    posts: Iterable[tuple[bytes, str, Sequence[EdgeChange]]],
-) -> Call:
-    """Change the sums of the posts of one bucket: for each the hash, the id ('' unknown) and the changes."""
+def add_edges(number: int, now_ms: int, limits: StoreLimits, work: Sequence[EdgeWork]) -> Call:
+    """Change the sums of the posts of one bucket, for several outbox entries at once."""
     script_keys = [keys.applied(number)]
-    args = [*effect.head(), now_ms, limits.ttl_ms, limits.half_lives, limits.boards]
-    for post, post_id, changes in posts:
-        script_keys += [keys.key("post", post), keys.key("wait", post)]
-        args += [post_id, len(changes)]
-        for change in changes:
-            args += [change.sign, change.stamp, change.actor]
+    args: list[Argument] = [now_ms, limits.ttl_ms, limits.half_lives, len(work)]
+    for entry in work:
+        args += [*entry.effect.head(), len(entry.posts)]
+    for entry in work:
+        for post, post_id, changes in entry.posts:
+            script_keys += keys.post_keys(post)
+            args += [post_id, changes]
     return Call(load("add_edges"), script_keys, args)
 
 
@@ -225,7 +224,7 @@ def put_post(effect: Effect, write: PostWrite, now_ms: int, limits: StoreLimits)
     """Write a post's record."""
     number = bucket(write.post)
     script_keys = [keys.applied(number), keys.key("post", write.post), keys.key("wait", write.post)]
-    args = [*effect.head(), now_ms, limits.ttl_ms, limits.half_lives, limits.boards, write.post_id, write.author_id]
+    args = [*effect.head(), now_ms, limits.ttl_ms, limits.half_lives, write.post_id, write.author_id]
     args += [write.author, write.event_ms, write.event_id, write.audience, write.form, write.topics]
     return Call(load("put_post"), script_keys, [*args, write.creation_code])
 
@@ -270,8 +269,13 @@ def settle_interactions(number: int, seq: int, people: Iterable[tuple[bytes, Seq
     return Call(load("settle_interactions"), script_keys, args)
 
 
-def settle_event(person: bytes, seq: int, forget: bytes = b"") -> Call:
-    """Close an entry; `forget` is the id hash of an event that was refused."""
+def close_entry(number: int, seq: int) -> Call:
+    """Close an entry of a bucket."""
+    return Call(None, [], [b"ZREMRANGEBYSCORE", keys.outbox(number), seq, seq])
+
+
+def settle_event(person: bytes, seq: int, forget: bytes) -> Call:
+    """Close an entry and forget the event with this id hash, which was refused."""
     return Call(load("settle_event"), [keys.outbox(bucket(person)), keys.key("heard", person)], [seq, forget])
 
 

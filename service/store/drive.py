@@ -11,8 +11,10 @@ from typing import Any
 
 import orjson
 
+from scoring.bank import Bank
+from scoring.marks import marks
 from service.store import calls, pieces
-from service.store.calls import Call, EdgeChange, Effect, StoreLimits
+from service.store.calls import Call, EdgeWork, Effect, StoreLimits
 from service.store.ids import NOBODY, IdHasher, bucket
 from service.store.pieces import Entry, Piece, Swept
 
@@ -25,16 +27,29 @@ Run = Callable[[Sequence[Call]], Coroutine[Any, Any, list[Any]]]
 
 @dataclass(slots=True)
 class Step:
-    """What is to be done for one entry after its far effects: further calls and marks for the boards, then the end.
+    """What is to be done for one entry after its far effects: further calls, then the end.
 
-    `people` and `posts` are those whose rows and values the entry has changed.
+    `people` and `posts` are those whose rows and values the entry has changed, `values` the new values of posts whose
+    places on the boards may have risen.
     """
 
     follow: list[Call] = field(default_factory=list)
-    marks: dict[int, list[tuple[bytes, bytes]]] = field(default_factory=dict)
     close: list[Call] = field(default_factory=list)
     people: set[bytes] = field(default_factory=set)
     posts: set[bytes] = field(default_factory=set)
+    values: dict[bytes, bytes] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class Edges:
+    """Far effects on posts' sums: they are put together by bucket, whatever entries they come from."""
+
+    bucket: int
+    work: EdgeWork
+
+
+Far = Sequence[Call | Edges]
+Then = Callable[[list[Any]], Step]
 
 
 class Driver:
@@ -44,16 +59,18 @@ class Driver:
         run: runs calls in order and gives their answers.
         hasher: of ids.
         limits: of the store.
+        bank: of the store.
         board_slots: slots of the bank, from 0, that have a board.
 
     """
 
-    def __init__(self, run: Run, hasher: IdHasher, limits: StoreLimits, board_slots: Sequence[int]) -> None:
+    def __init__(self, run: Run, hasher: IdHasher, limits: StoreLimits, bank: Bank, board_slots: Sequence[int]) -> None:
         self._run = run
         self._hasher = hasher
         self._limits = limits
+        self._bank = bank
         self._board_slots = board_slots
-        self._plans: dict[bytes, Callable[[Entry, int], tuple[list[Call], Callable[[list[Any]], Step]]]] = {
+        self._plans: dict[bytes, Callable[[Entry, int], tuple[Far, Then]]] = {
             pieces.INTERACTION: self._edges,
             pieces.RETRACT: self._retract,
             pieces.POST: self._post,
@@ -78,14 +95,50 @@ class Driver:
         for entry in erasures:
             await self._erase(entry, now_ms, refused)
         plans = [self._plan(entry, now_ms, refused) for entry in entries if entry.pieces[0].type != pieces.ERASE]
-        answers = await self._run([call for far, _ in plans for call in far])
+        answers = await self._run_far([one for far, _ in plans for one in far], now_ms)
         steps, at = [], 0
         for far, then in plans:
             steps.append(then(answers[at : at + len(far)]))
             at += len(far)
-        marks = [calls.raise_marks(slot, pairs) for slot, pairs in _merged(steps).items()]
-        await self._run([call for step in steps for call in step.follow] + marks)
+        await self._run([call for step in steps for call in step.follow] + self._raised(steps, now_ms))
         await self._close(steps, refused=bool(refused))
+
+    async def _run_far(self, far: Far, now_ms: int) -> list[Any]:
+        """Run far effects and give the answer of each; those on sums are one call for each bucket."""
+        by_bucket: dict[int, list[tuple[int, EdgeWork]]] = {}
+        plain: list[tuple[int, Call]] = []
+        for place, one in enumerate(far):
+            if isinstance(one, Edges):
+                by_bucket.setdefault(one.bucket, []).append((place, one.work))
+            else:
+                plain.append((place, one))
+        merged = [
+            calls.add_edges(number, now_ms, self._limits, [work for _, work in group])
+            for number, group in by_bucket.items()
+        ]
+        got = await self._run([*merged, *(call for _, call in plain)])
+        answers: list[Any] = [None] * len(far)
+        for group, flat in zip(by_bucket.values(), got, strict=False):
+            at = 0
+            for place, work in group:
+                answers[place] = flat[at : at + len(work.posts)]
+                at += len(work.posts)
+        for (place, _), answer in zip(plain, got[len(merged) :], strict=True):
+            answers[place] = answer
+        return answers
+
+    def _raised(self, steps: Sequence[Step], now_ms: int) -> list[Call]:
+        """Raise the places of posts on the boards."""
+        values = {post: value for step in steps for post, value in step.values.items() if value}
+        if not values:
+            return []
+        found = marks(list(values.values()), self._bank, self._board_slots, now_ms)
+        raised = []
+        for slot, column in zip(self._board_slots, found.T.tolist(), strict=True):
+            pairs = [(b"%.17g" % mark, post) for mark, post in zip(column, values, strict=True) if mark == mark]  # noqa: PLR0124  not NaN
+            if pairs:
+                raised.append(calls.raise_marks(slot, pairs))
+        return raised
 
     async def _close(self, steps: Sequence[Step], *, refused: bool) -> None:
         """Log what has changed, then close the entries: a crash in between leaves them open, to be logged again.
@@ -97,9 +150,7 @@ class Driver:
         log = [calls.log_changes(people, posts)] if people or posts else []
         await self._run([*log, *(call for step in steps for call in step.close), *(log if refused else [])])
 
-    def _plan(
-        self, entry: Entry, now_ms: int, refused: dict[bytes, str]
-    ) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _plan(self, entry: Entry, now_ms: int, refused: dict[bytes, str]) -> tuple[Far, Then]:
         plan = self._plans[entry.pieces[0].type]
         far, then = plan(entry, now_ms)
 
@@ -128,25 +179,11 @@ class Driver:
                 if answer[0] == b"":
                     refused.update({item.id_hash: "hash" for item in items})
 
-    def _note_marks(self, step: Step, post: bytes, marks: Sequence[bytes]) -> None:
-        for slot, mark in zip(self._board_slots, marks, strict=True):
-            if mark != b"":
-                step.marks.setdefault(slot, []).append((mark, post))
-
-    def _edges(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _edges(self, entry: Entry, _: int) -> tuple[Far, Then]:
         groups = _by_bucket(_interactions(entry, self._hasher))
         effect = Effect(entry.bucket, "e", entry.seq, entry.low)
         far = [
-            calls.add_edges(
-                effect,
-                number,
-                now_ms,
-                self._limits,
-                [
-                    (post, name, [EdgeChange("+", item.stamp, item.actor) for item in items])
-                    for post, name, items in posts
-                ],
-            )
+            Edges(number, EdgeWork(effect, [(post, name, _added(items)) for post, name, items in posts]))
             for number, posts in groups
         ]
 
@@ -159,7 +196,7 @@ class Driver:
                 step.posts.add(post)
                 step.people.update(item.actor for item in items)
                 if author != b"-":
-                    self._note_marks(step, post, answer[1:])
+                    step.values[post] = answer[1]
             found.sort(key=lambda one: one[0])
             people = [
                 (person, [(id_hash, author) for _, id_hash, author in group])
@@ -170,16 +207,15 @@ class Driver:
 
         return far, then
 
-    def _retract(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _retract(self, entry: Entry, _: int) -> tuple[Far, Then]:
         body = entry.pieces[0].body
         person, post, stamp = body[8:16], body[16:24], body[24:32]
         effect = Effect(entry.bucket, "e", entry.seq, entry.low)
-        change = [(post, "", [EdgeChange("-", stamp, person)])]
-        far = [calls.add_edges(effect, bucket(post), now_ms, self._limits, change)]
-        close = [calls.settle_event(person, entry.seq)]
+        far = [Edges(bucket(post), EdgeWork(effect, [(post, "", b"-" + stamp + person)]))]
+        close = [calls.close_entry(entry.bucket, entry.seq)]
         return far, lambda _: Step(close=close, people={person}, posts={post})
 
-    def _post(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _post(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
         piece = entry.pieces[0]
         write = read_post_piece(piece, self._hasher)
         far = [calls.put_post(Effect(entry.bucket, "p", entry.seq, entry.low), write, now_ms, self._limits)]
@@ -191,14 +227,14 @@ class Driver:
             early = {answer[2][i : i + 8] for i in range(0, len(answer[2]), 8)}
             follow = [calls.learn_author(person, write.post, write.author) for person in sorted(early)]
             follow.append(calls.put_creation(write.author, entry.seq, write.post + answer[1], now_ms, self._limits))
-            close = [calls.settle_event(write.author, entry.seq)]
+            close = [calls.close_entry(entry.bucket, entry.seq)]
             step = Step(follow, close=close, people={write.author}, posts={write.post})
-            self._note_marks(step, write.post, answer[3:])
+            step.values[write.post] = answer[3]
             return step
 
         return far, then
 
-    def _tie(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _tie(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
         tie = read_tie_piece(entry.pieces[0], self._hasher)
         marked = RELATIONS[tie.relation] in MARKED
         far = [
@@ -214,15 +250,16 @@ class Driver:
 
         return far, then
 
-    def _withdraw(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _withdraw(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
         event = orjson.loads(entry.pieces[0].body[8:])
         person, post = self._hasher.hash(event["actor"]), self._hasher.hash(event["post"])
         effect = Effect(entry.bucket, "w", entry.seq, entry.low)
         far = [calls.withdraw_post(effect, post, event["post"], now_ms, self._limits)]
 
         def then(answers: list[Any]) -> Step:
-            forget = b"" if answers[0] == b"ok" else entry.pieces[0].id_hash
-            return Step(close=[calls.settle_event(person, entry.seq, forget)], posts={post})
+            if answers[0] == b"ok":
+                return Step(close=[calls.close_entry(entry.bucket, entry.seq)], posts={post})
+            return Step(close=[calls.settle_event(person, entry.seq, entry.pieces[0].id_hash)], posts={post})
 
         return far, then
 
@@ -233,11 +270,12 @@ class Driver:
         seq, low, member = (await self._run([sweep]))[0]
         if seq:
             await self.drive([Entry.read(entry.bucket, low, member)], now_ms, refused)
-        await self._run([calls.settle_event(person, entry.seq)])
+        await self._run([calls.close_entry(entry.bucket, entry.seq)])
 
-    def _swept(self, entry: Entry, now_ms: int) -> tuple[list[Call], Callable[[list[Any]], Step]]:
+    def _swept(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
         swept = Swept.read(entry.pieces[0].body)
-        far, posts = self._swept_edges(entry, swept, now_ms)
+        edges, posts = self._swept_edges(entry, swept)
+        far: list[Call | Edges] = list(edges)
         purges = _hashes_by_bucket(swept.posts)
         purge = Effect(entry.bucket, "u", entry.seq, entry.low)
         far += [
@@ -264,31 +302,21 @@ class Driver:
                     for post, stamp in zip(group, call, strict=True)
                     if stamp != b""
                 ]
-            step.close.append(calls.settle_event(swept.person, entry.seq))
+            step.close.append(calls.close_entry(entry.bucket, entry.seq))
             return step
 
         return far, then
 
-    def _swept_edges(self, entry: Entry, swept: Swept, now_ms: int) -> tuple[list[Call], list[list[bytes]]]:
-        signed = [("-", edge) for edge in swept.taken] + [("+", edge) for edge in swept.put]
-        by_post: dict[bytes, list[EdgeChange]] = {}
+    def _swept_edges(self, entry: Entry, swept: Swept) -> tuple[list[Edges], list[list[bytes]]]:
+        signed = [(b"-", edge) for edge in swept.taken] + [(b"+", edge) for edge in swept.put]
+        by_post: dict[bytes, bytes] = {}
         for sign, edge in signed:
-            by_post.setdefault(edge[:8], []).append(EdgeChange(sign, edge[8:], swept.person))
+            by_post[edge[:8]] = by_post.get(edge[:8], b"") + sign + edge[8:] + swept.person
         effect, groups = Effect(entry.bucket, "e", entry.seq, entry.low), _hashes_by_bucket(list(by_post))
         far = [
-            calls.add_edges(effect, number, now_ms, self._limits, [(post, "", by_post[post]) for post in group])
-            for number, group in groups
+            Edges(number, EdgeWork(effect, [(post, "", by_post[post]) for post in group])) for number, group in groups
         ]
         return far, [group for _, group in groups]
-
-
-def _merged(steps: Sequence[Step]) -> dict[int, list[tuple[bytes, bytes]]]:
-    """Put the marks of all steps together, by board."""
-    merged: dict[int, list[tuple[bytes, bytes]]] = {}
-    for step in steps:
-        for slot, pairs in step.marks.items():
-            merged.setdefault(slot, []).extend(pairs)
-    return merged
 
 
 @dataclass(frozen=True, slots=True)
@@ -318,6 +346,10 @@ def _by_bucket(items: list[_Item]) -> list[tuple[int, list[tuple[bytes, str, lis
     for (post, post_id), group in posts.items():
         groups.setdefault(bucket(post), []).append((post, post_id, group))
     return list(groups.items())
+
+
+def _added(items: Sequence[_Item]) -> bytes:
+    return b"".join([b"+" + item.stamp + item.actor for item in items])
 
 
 def _hashes_by_bucket(hashes: Sequence[bytes]) -> list[tuple[int, list[bytes]]]:

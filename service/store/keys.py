@@ -65,6 +65,12 @@ def keys(name: str, hashes: list[bytes]) -> list[bytes]:
     return [prefix[id_hash[0] & 127] + id_hash for id_hash in hashes]
 
 
+def post_keys(post: bytes) -> list[bytes]:
+    """Build the keys of a post's value and of who waits for its author."""
+    number = post[0] & 127
+    return [_PREFIX["post"][number] + post, _PREFIX["wait"][number] + post]
+
+
 def packed_mget(name: str, hashes: list[bytes]) -> bytes:
     r"""Write an MGET of one key for each hash, in the protocol of Redis.
 

@@ -1,6 +1,7 @@
 """One store: its connection, its lasting choices (hash key, bank), its kinds, and how events get in."""
 
 import os
+import struct
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
@@ -90,8 +91,7 @@ class Store:
         self.limits = StoreLimits(
             ttl_ms=options.retention_ms + DAY_MS,
             retention_ms=options.retention_ms,
-            half_lives=",".join(f"{half_life:.17g}" for half_life in options.bank.half_lives_ms),
-            boards=",".join(str(slot + 1) for slot in self.board_slots),
+            half_lives=struct.pack(f"<{len(options.bank.half_lives_ms)}d", *options.bank.half_lives_ms),
             bank_size=len(options.bank.half_lives_ms),
         )
         self.hasher = IdHasher(b"")
@@ -102,7 +102,7 @@ class Store:
         self._sweeper = Periodic("sweep", self._sweep, _SWEEP_EVERY_S, at_once=True)
 
     def _set_up(self) -> None:
-        self.driver = Driver(self.run, self.hasher, self.limits, self.board_slots)
+        self.driver = Driver(self.run, self.hasher, self.limits, self.options.bank, self.board_slots)
         self.ingest = Ingest(
             self.run,
             self.driver,
@@ -182,7 +182,7 @@ class Store:
         await self.run([trim_board(slot, BOARD_POSTS) for slot in self.board_slots])
 
     async def _agree(self) -> None:
-        bank = self.limits.half_lives
+        bank = ",".join(f"{half_life:.17g}" for half_life in self.options.bank.half_lives_ms)
         ours = {b"format": FORMAT.encode(), b"bank": bank.encode(), b"hash_key": os.urandom(16)}
         await self.connection.run([Call(None, [], [b"HSETNX", keys.META, name, value]) for name, value in ours.items()])
         self.meta = await self.connection.read_hash(keys.META)

@@ -1,11 +1,12 @@
 -- use: once, post, sums
 -- Take an erased person's post events, up to a time, out of their posts, once.
 -- KEYS[1] applied:{b} hash · KEYS[2…] post
--- ARGV[1] source bucket and effect · ARGV[2] number · ARGV[3] low · ARGV[4] lifetime, ms · ARGV[5] half-lives, ms ·
+-- ARGV[1] source bucket and effect · ARGV[2] number · ARGV[3] low · ARGV[4] lifetime, ms ·
+--   ARGV[5] half-lives, ms (packed doubles) ·
 --   ARGV[6] time of the erasure, ms · ARGV[7] the person's hash · ARGV[8] now, ms
 -- Returns for each post the stamp of the creation edge that remains, '' where none does
 -- Costs 1 command and 2 a post.
-local half_lives, until_ms = numbers(ARGV[5]), tonumber(ARGV[6])
+local half_lives, until_ms = doubles(ARGV[5]), tonumber(ARGV[6])
 local fresh = once(KEYS[1], ARGV[1], tonumber(ARGV[2]), tonumber(ARGV[3]))
 
 local function creation_stamp(post)

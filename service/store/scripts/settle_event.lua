@@ -1,11 +1,11 @@
 -- use: slots
--- Close an outbox entry; forget the event where it was refused elsewhere, so that it may be sent again.
+-- Close an outbox entry and forget its event, which was refused elsewhere, so that it may be sent again.
 -- KEYS[1] outbox:{b} · KEYS[2] heard (packed list)
--- ARGV[1] number of the entry · ARGV[2] id hash of the event to forget, '' none
+-- ARGV[1] number of the entry · ARGV[2] id hash of the event to forget
 -- Returns 1, or 0 where the entry was closed before
--- Costs 1 command, 3 where an event is forgotten.
+-- Costs 3 commands.
 local closed = redis.call('ZREMRANGEBYSCORE', KEYS[1], ARGV[1], ARGV[1])
-if closed == 1 and ARGV[2] ~= '' then
+if closed == 1 then
   local heard = redis.call('GET', KEYS[2]) or ''
   local at = find_slot(heard, ARGV[2], 16)
   if at then

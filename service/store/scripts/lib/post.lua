@@ -62,7 +62,7 @@ local function read_post(value, bank_size)
   return post
 end
 
--- Each write prolongs the post's life, up to 12 lifetimes after its creation.
+-- Write a post and return its value. Each write prolongs the post's life, up to 12 lifetimes after its creation.
 local function write_post(key, post, bank_size, ttl_ms, now_ms)
   if post.created > 0 then
     ttl_ms = math.max(1, math.min(ttl_ms, post.created + 12 * ttl_ms - now_ms))
@@ -75,5 +75,7 @@ local function write_post(key, post, bank_size, ttl_ms, now_ms)
   for _, kind in ipairs(post.kinds) do
     parts[#parts + 1] = struct.pack(layout, unpack(kind))
   end
-  redis.call('SET', key, table.concat(parts), 'PX', string.format('%.0f', ttl_ms))
+  local value = table.concat(parts)
+  redis.call('SET', key, value, 'PX', string.format('%.0f', ttl_ms))
+  return value
 end

@@ -55,32 +55,9 @@ local function take_edge(post, stamp, half_lives)
   fold_edge(post, stamp, -1, half_lives)
 end
 
--- For each half-life of the boards, log2 of the post's decayed count plus now over the half-life:
--- a number that stays the same as time passes. '' where the post has no edge.
-local function board_marks(post, now_ms, half_lives, board_slots)
-  local lags, count = {}, #post.edges / 8
-  for i = 1, count do
-    lags[i] = stamp_ms(post.edges, 8 * i - 7) - now_ms
-  end
-  local marks = {}
-  for i, j in ipairs(board_slots) do
-    local half_life, total = half_lives[j], 0
-    for k = 1, count do
-      total = total + 2 ^ (lags[k] / half_life)
-    end
-    for _, kind in ipairs(post.kinds) do
-      total = total + kind[BEFORE_SUMS + j] * 2 ^ ((kind[AS_OF] - now_ms) / half_life)
-    end
-    marks[i] = total > 0 and string.format('%.17g', math.log(total) / math.log(2) + now_ms / half_life) or ''
-  end
-  return marks
-end
-
--- Read '3600000,10800000' as numbers.
-local function numbers(text)
-  local list = {}
-  for word in string.gmatch(text, '[^,]+') do
-    list[#list + 1] = tonumber(word)
-  end
+-- Read packed doubles.
+local function doubles(packed)
+  local list = { struct.unpack('<' .. string.rep('d', #packed / 8), packed) }
+  list[#list] = nil
   return list
 end
