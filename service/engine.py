@@ -77,7 +77,6 @@ class Engine:
             retention_ms=settings.retention_ms,
             read_timeout_s=settings.store_timeout_ms / 1000,
             write_timeout_s=settings.write_timeout_ms / 1000,
-            pool_size=settings.pool_size,
         )
         texts = [_policy_text(path) for path in settings.policies]
         return cls(

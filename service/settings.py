@@ -106,9 +106,6 @@ class Settings(BaseSettings):
     )
     store_timeout_ms: Ms = _setting(500, "time a read of the store may take", "an integer from 1 to 600000")
     write_timeout_ms: Ms = _setting(5_000, "time a write to the store may take", "an integer from 1 to 600000")
-    pool_size: Annotated[int, Field(ge=1, le=10_000)] = _setting(
-        64, "connections to the store for each worker", "an integer from 1 to 10000"
-    )
     cache_mb: Annotated[int, Field(ge=0, le=65_536)] = _setting(
         64, "memory for rows that each worker remembers between reads, and again for posts", "megabytes, 0 to 65536"
     )

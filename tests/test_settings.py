@@ -34,7 +34,7 @@ def test_defaults() -> None:
     assert (settings.host, settings.port, settings.workers) == ("127.0.0.1", 8321, 1)
     assert settings.policies == (BUILT_IN_POLICY,)
     assert (settings.budget_ms, settings.retention_ms) == (50.0, 30 * 86_400_000)
-    assert (settings.store_timeout_ms, settings.write_timeout_ms, settings.pool_size) == (500, 5_000, 64)
+    assert (settings.store_timeout_ms, settings.write_timeout_ms, settings.cache_mb) == (500, 5_000, 64)
     assert (settings.max_body_bytes, settings.max_batch, settings.shutdown_grace_s) == (8_388_608, 1_000, 10)
     assert settings.bank_half_lives_ms == ()
     assert set(origins(settings).values()) == {"default"}
@@ -97,11 +97,11 @@ def test_refused_value(name: str, value: str, allowed: str) -> None:
 
 def test_every_refused_value_is_named(monkeypatch: pytest.MonkeyPatch) -> None:
     """All refused values are told at once."""
-    monkeypatch.setenv("WAXWANE_POOL_SIZE", "none")
+    monkeypatch.setenv("WAXWANE_CACHE_MB", "none")
     with pytest.raises(SettingsError) as refusal:
         Settings.load({"port": "-1"})
-    assert sorted(problem.split(" (")[0] for problem in refusal.value.problems) == ["pool_size 'none'", "port '-1'"]
-    assert "(from environment variable WAXWANE_POOL_SIZE)" in str(refusal.value)
+    assert sorted(problem.split(" (")[0] for problem in refusal.value.problems) == ["cache_mb 'none'", "port '-1'"]
+    assert "(from environment variable WAXWANE_CACHE_MB)" in str(refusal.value)
 
 
 def test_unknown_option() -> None:

@@ -5,11 +5,10 @@ from contextlib import asynccontextmanager
 from typing import Any
 
 import structlog
-from redis.asyncio import BlockingConnectionPool, Redis
-from redis.asyncio.connection import AbstractConnection
+from redis.asyncio import ConnectionPool
 from redis.asyncio.retry import Retry
 from redis.backoff import NoBackoff
-from redis.exceptions import NoScriptError, RedisError, ResponseError
+from redis.exceptions import RedisError, ResponseError
 
 from service.errors import StoreUnavailable
 from service.store.calls import Argument, Call
@@ -18,13 +17,17 @@ from service.store.scripts import load, names
 
 log = structlog.get_logger("waxwane.store")
 
-_POOL_WAIT_S = 1.0
+WRITE_LINES = 4
+"""Connections for writes: a small batch need not wait until a large one has been answered."""
+
+_SHORT = 512
+_LENGTHS = [b"\r\n$%d\r\n" % length for length in range(_SHORT)]
 _SHOWN_CHARS = 500
 _FAILURES = (TimeoutError, RedisError, OSError)
 
 
 class Connection:
-    """To one server: one line that all reads share, whose waits are short, and a pool of connections for writes.
+    """To one server: a line that all reads share, whose waits are short, and a few for writes.
 
     Neither tries again: a read has a budget, and a write that was cut off is settled by sending its events again.
 
@@ -32,14 +35,13 @@ class Connection:
         url: redis://, rediss:// or unix:// address.
         read_timeout_s: longest wait for an answer to a read, seconds.
         write_timeout_s: longest wait for an answer to a write, seconds.
-        pool_size: most connections for writes.
 
     """
 
-    def __init__(self, url: str, *, read_timeout_s: float, write_timeout_s: float, pool_size: int) -> None:
-        self._reading = _client(url, read_timeout_s, pool_size)
-        self._line = Line(self._reading.connection_pool, read_timeout_s)
-        self.writes = _client(url, write_timeout_s, pool_size)
+    def __init__(self, url: str, *, read_timeout_s: float, write_timeout_s: float) -> None:
+        self._reading = Line(_pool(url, read_timeout_s), read_timeout_s)
+        self._writing = [Line(_pool(url, write_timeout_s), write_timeout_s) for _ in range(WRITE_LINES)]
+        self._turn = 0
 
     async def start(self) -> None:
         """Hand the scripts to the server.
@@ -53,9 +55,8 @@ class Connection:
 
     async def close(self) -> None:
         """Close all connections."""
-        await self._line.close()
-        await self._reading.aclose()
-        await self.writes.aclose()
+        for line in (self._reading, *self._writing):
+            await line.close()
 
     async def run(self, calls: Sequence[Call]) -> list[Any]:
         """Run calls in one round trip, in order, and give their answers.
@@ -68,7 +69,7 @@ class Connection:
             return []
         async with translated():
             answers = await self._pipeline(calls)
-            lost = [i for i, answer in enumerate(answers) if isinstance(answer, NoScriptError)]
+            lost = [i for i, answer in enumerate(answers) if _without_script(answer)]
             if lost:
                 await self._load_scripts()
                 for i, answer in zip(lost, await self._pipeline([calls[i] for i in lost]), strict=True):
@@ -104,7 +105,7 @@ class Connection:
 
         """
         try:
-            answers = await self._line.ask(packed, count)
+            answers = await self._reading.ask(packed, count)
             for answer in answers:
                 if isinstance(answer, Exception):
                     raise answer
@@ -120,27 +121,30 @@ class Connection:
             else pack((b"EVALSHA", call.script.sha, len(call.keys), *call.keys, *call.args))
             for call in calls
         ]
-        return await _exchange(self.writes, b"".join(packed), len(calls))
+        self._turn = (self._turn + 1) % WRITE_LINES
+        return await self._writing[self._turn].ask(b"".join(packed), len(calls))
 
     async def _load_scripts(self) -> None:
-        pipe = self.writes.pipeline(transaction=False)
-        for name in names():
-            pipe.execute_command("SCRIPT LOAD", load(name).source)
-        await pipe.execute()
+        loads = [pack((b"SCRIPT", b"LOAD", load(name).source)) for name in names()]
+        for answer in await self._writing[0].ask(b"".join(loads), len(loads)):
+            if isinstance(answer, Exception):
+                raise answer
 
 
-def _client(url: str, timeout_s: float, pool_size: int) -> Redis:
-    pool = BlockingConnectionPool.from_url(
+def _pool(url: str, timeout_s: float) -> ConnectionPool:
+    """Make what tells a line how to connect."""
+    return ConnectionPool.from_url(
         url,
-        max_connections=pool_size,
-        timeout=_POOL_WAIT_S,
         socket_timeout=timeout_s,
         socket_connect_timeout=min(timeout_s, 1.0),
         retry=Retry(NoBackoff(), 0),
         decode_responses=False,
         protocol=2,
     )
-    return Redis.from_pool(pool)
+
+
+def _without_script(answer: object) -> bool:
+    return isinstance(answer, ResponseError) and str(answer).startswith("NOSCRIPT")
 
 
 def pack(parts: Iterable[Argument]) -> bytes:
@@ -155,14 +159,12 @@ def pack(parts: Iterable[Argument]) -> bytes:
     raw = [
         part if isinstance(part, bytes) else part.encode() if isinstance(part, str) else b"%d" % part for part in parts
     ]
-    return b"*%d\r\n" % len(raw) + b"".join([b"$%d\r\n%b\r\n" % (len(part), part) for part in raw])
-
-
-_LENGTHS = [b"\r\n$%d\r\n" % length for length in range(64)]
+    framed = [(_LENGTHS[size] if (size := len(part)) < _SHORT else b"\r\n$%d\r\n" % size) + part for part in raw]
+    return b"*%d%b\r\n" % (len(raw), b"".join(framed))
 
 
 def pack_mget(keys: Sequence[bytes]) -> bytes:
-    r"""Write an MGET of keys of up to 63 bytes.
+    r"""Write an MGET of short keys.
 
     >>> pack_mget([b"bed"])
     b'*2\r\n$4\r\nMGET\r\n$3\r\nbed\r\n'
@@ -170,24 +172,6 @@ def pack_mget(keys: Sequence[bytes]) -> bytes:
     """
     parts = [_LENGTHS[len(key)] + key for key in keys]
     return b"*%d\r\n$4\r\nMGET%b\r\n" % (len(keys) + 1, b"".join(parts))
-
-
-async def _exchange(client: Redis, packed: bytes, answers: int) -> list[Any]:
-    """Send packed commands on a connection of the client's pool and read their answers, errors among them."""
-    pool = client.connection_pool
-    connection = await pool.get_connection()  # type: ignore[no-untyped-call]
-    try:
-        await connection.send_packed_command(packed)
-        return [await _answer(connection) for _ in range(answers)]
-    finally:
-        await pool.release(connection)
-
-
-async def _answer(connection: AbstractConnection) -> Any:  # noqa: ANN401  whatever the command answers
-    try:
-        return await connection.read_response()
-    except ResponseError as error:
-        return error
 
 
 @asynccontextmanager

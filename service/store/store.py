@@ -44,7 +44,6 @@ class StoreOptions:
         retention_ms: age at which edges may be forgotten, milliseconds.
         read_timeout_s: longest wait for a read, seconds.
         write_timeout_s: longest wait for a write, seconds.
-        pool_size: most connections of each of the two pools.
 
     """
 
@@ -53,7 +52,6 @@ class StoreOptions:
     retention_ms: int
     read_timeout_s: float = 0.5
     write_timeout_s: float = 5.0
-    pool_size: int = 64
 
 
 def board_slots(size: int) -> tuple[int, ...]:
@@ -84,7 +82,6 @@ class Store:
             options.url,
             read_timeout_s=options.read_timeout_s,
             write_timeout_s=options.write_timeout_s,
-            pool_size=options.pool_size,
         )
         self.kinds = KindRegistry(self.connection)
         self.board_slots = board_slots(len(options.bank.half_lives_ms))
