@@ -63,12 +63,20 @@ class _Wire(asyncio.Protocol):
 
     def fail(self, error: Exception) -> None:
         """Give up: answers can't be told apart any more."""
+        self._disappoint(error)
+        self.transport.abort()
+
+    def close(self) -> None:
+        """Hang up in good order."""
+        self._disappoint(LostConnectionError("closed"))
+        self.transport.close()
+
+    def _disappoint(self, error: Exception) -> None:
         self.open = False
         while self._asked:
             first = self._asked.popleft()
             if not first.answered.done():
                 first.answered.set_exception(error)
-        self.transport.abort()
 
 
 class Line:
@@ -121,8 +129,12 @@ class Line:
                 return self._wire
             await self._drop()
             connection: AbstractConnection = self._pool.make_connection()  # type: ignore[no-untyped-call]
-            async with asyncio.timeout(self._timeout_s):
-                await connection.connect()  # type: ignore[no-untyped-call]
+            try:
+                async with asyncio.timeout(self._timeout_s):
+                    await connection.connect()  # type: ignore[no-untyped-call]
+            except BaseException:
+                await connection.disconnect(nowait=True)
+                raise
             self._connection, self._wire = connection, _taken_over(connection)
             return self._wire
 
@@ -130,7 +142,7 @@ class Line:
         connection, self._connection = self._connection, None
         wire, self._wire = self._wire, None
         if wire is not None:
-            wire.fail(LostConnectionError("closed"))
+            wire.close()
             await wire.closed
         if connection is not None:
             await connection.disconnect(nowait=True)
