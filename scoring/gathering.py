@@ -26,10 +26,15 @@ from scoring.compiled import (
 from scoring.ranking import Ranking
 from scoring.reduce import Candidates
 
-_KEPT: Final = 8
-_KEPT_POSTS: Final = 1 << 18
+_SMALL: Final = 1 << 16
+_LARGE: Final = 1 << 20
 
-_kept: list[int] = []
+_kept_small: list[int] = []
+_kept_large: list[int] = []
+"""Memory of gatherings that have ended, by the posts they held: it is costlier to ask for than to empty."""
+
+_KEPT_SMALL: Final = 8
+_KEPT_LARGE: Final = 2
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,25 +83,26 @@ class Gathering:
     Args:
         ranking: The compiled policy.
         t_ms: The time of the feed, Unix milliseconds.
+        posts: About how many posts there will be.
     """
 
-    def __init__(self, ranking: Ranking, t_ms: int) -> None:
+    def __init__(self, ranking: Ranking, t_ms: int, posts: int = 0) -> None:
         self._rule: Rule = ranking.rule
         self._stranger = ranking.policy.affinity.crowd
         self._ranking = ranking
         self._t_ms = float(t_ms)
         self._values: list[bytes] = []
-        self._handle = _kept.pop() if _kept else passes.gather_new(1 << 15)
-        if not self._handle:
-            raise MemoryError
+        self._handle = _taken(posts)
 
     def __del__(self) -> None:
         handle = getattr(self, "_handle", None)
         if not handle or passes is None:
             return
-        if len(_kept) < _KEPT and self.counts()[0] <= _KEPT_POSTS:
+        posts = self.counts()[0]
+        kept, most = (_kept_small, _KEPT_SMALL) if posts <= _SMALL else (_kept_large, _KEPT_LARGE)
+        if len(kept) < most and posts <= _LARGE:
             passes.gather_reset(handle)
-            _kept.append(handle)
+            kept.append(handle)
         else:
             passes.gather_free(handle)
 
@@ -227,3 +233,12 @@ class Gathering:
         nth, score, order = (c_int64 * count)(), (c_double * count)(), (c_double * count)()
         n = passes.judge_found(self._handle, count, nth, score, order)
         return list(zip(nth[:n], score[:n], order[:n], strict=True))
+
+
+def _taken(posts: int) -> int:
+    """Take memory that was kept, of the right size, or new memory."""
+    kept = _kept_small if posts <= _SMALL else _kept_large
+    handle: int | None = kept.pop() if kept else passes.gather_new(max(posts, _SMALL // 2))
+    if not handle:
+        raise MemoryError
+    return handle

@@ -3,7 +3,7 @@
 import asyncio
 import ssl
 from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
+from contextlib import asynccontextmanager, suppress
 from pathlib import Path
 
 import pytest
@@ -21,25 +21,34 @@ EVENTS = [
 
 
 async def _copy(source: asyncio.StreamReader, target: asyncio.StreamWriter) -> None:
-    while data := await source.read(65_536):
-        target.write(data)
-        await target.drain()
-    target.close()
+    try:
+        while data := await source.read(65_536):
+            target.write(data)
+            await target.drain()
+    finally:
+        target.close()
 
 
 @asynccontextmanager
 async def door_to(socket: str, tls: ssl.SSLContext | None = None) -> AsyncIterator[int]:
     """Open a TCP port, with TLS where a context is given, that leads to a unix socket."""
+    open_ones = asyncio.Semaphore(100)
 
     async def serve(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        inner_reader, inner_writer = await asyncio.open_unix_connection(socket)
-        await asyncio.gather(_copy(reader, inner_writer), _copy(inner_reader, writer), return_exceptions=True)
+        async with open_ones:
+            inner_reader, inner_writer = await asyncio.open_unix_connection(socket)
+            await asyncio.gather(_copy(reader, inner_writer), _copy(inner_reader, writer), return_exceptions=True)
+            for one in (writer, inner_writer):
+                with suppress(OSError):
+                    await one.wait_closed()
 
     server = await asyncio.start_server(serve, "127.0.0.1", 0, ssl=tls)
     try:
         yield server.sockets[0].getsockname()[1]
     finally:
         server.close()
+        for _ in range(100):  # until all that were open are closed
+            await open_ones.acquire()
 
 
 async def _same_feed(url: str) -> None:

@@ -30,6 +30,9 @@ Answer = TypeVar("Answer")
 ROWS_AT_ONCE = 500
 """Rows fetched and added up between two looks at the deadline."""
 
+EDGES_A_PERSON = 60
+"""About how many edges a row has: room for so many is made before rows come."""
+
 ROWS_SHARE = 0.7
 """How much of the budget fetching rows may use up: the rest is for looking up the best."""
 
@@ -164,7 +167,7 @@ class Ranker:
         deadline.stage("reader")
         prepared = self._policies.prepared(policy, self._store.kinds.names)
         standing = self._readers.standing(state, prepared.ranking, t_ms)
-        gathering = Gathering(prepared.ranking, t_ms)
+        gathering = Gathering(prepared.ranking, t_ms, EDGES_A_PERSON * len(standing.people))
         rows = await self._rows(standing, gathering, deadline)
         view = View(state, standing, rows, prepared, len(rows) == len(standing.people))
         _, _, markers = gathering.counts()
