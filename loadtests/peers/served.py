@@ -37,7 +37,7 @@ def serve(store: str, *options: str) -> Iterator[Served]:
     program = [sys.executable, "-c", "from service.cli.main import main; main()"]
     command = [*program, "serve", "--store", store, "--port", str(port), *options]
     environment = {name: value for name, value in os.environ.items() if not name.startswith("WAXWANE_")}
-    child = subprocess.Popen(command, stderr=subprocess.DEVNULL, env=environment)
+    child = subprocess.Popen(command, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, env=environment)
     try:
         _wait_until_ready(port, child)
         yield Served(port, child.pid)

@@ -68,7 +68,8 @@ def floor(path: str, standing: Standing, ranking: Ranking, t_ms: int) -> Way:
 def redis_alone(path: str, world: Columns) -> Way:
     """ZUNIONSTORE of one sorted set a person with the affinities as WEIGHTS, and one of the crowd; then ZREVRANGE.
 
-    The sets hold each post's decayed sum at the time of the reads: more than an application could keep up to date.
+    Two favours to it: the sets hold each post's decayed sum at the time of the reads, which an application could not
+    keep up to date, and that of the crowd holds the reader's candidates only.
     """
     client, line = redis.Redis(unix_socket_path=path, db=9), Socket(path)
     value, tied = world.value(), world.tied()
@@ -79,14 +80,15 @@ def redis_alone(path: str, world: Columns) -> Way:
         for post, worth in zip(world.post[chosen].tolist(), value[chosen].tolist(), strict=True):
             sums[post] += worth
         pipe.zadd(f"by:{person}", {str(post): worth for post, worth in sums.items()})
-    pipe.zadd("crowd", {str(post): worth for post, worth in enumerate(world.crowd().tolist())})
+    crowd = world.crowd().tolist()
+    candidates = np.unique(world.post[np.isin(world.person, tied)])
+    pipe.zadd("crowd", {str(post): crowd[post] for post in candidates.tolist()})
     pipe.execute()
     line.ask(pack([b"SELECT", 9]))
     weights = [repr(affinity - world.stranger) for affinity in world.affinity[tied].tolist()]
     sets = [f"by:{person}" for person in tied.tolist()]
     union = pack(["ZUNIONSTORE", "scores", len(sets) + 1, *sets, "crowd", "WEIGHTS", *weights, repr(world.stranger)])
     best = pack(["ZREVRANGE", "scores", 0, TOP - 1, "WITHSCORES"])
-    candidates = set(world.post[np.isin(world.person, tied)].tolist())
 
     def read() -> object:
         line.ask(union)
@@ -94,8 +96,8 @@ def redis_alone(path: str, world: Columns) -> Way:
 
     def top() -> Top:
         line.ask(union)
-        pairs = client.zrevrange("scores", 0, 20 * TOP, withscores=True)
-        return [(world.posts[int(post)], score) for post, score in pairs if int(post) in candidates][:TOP]
+        pairs = client.zrevrange("scores", 0, TOP - 1, withscores=True)
+        return [(world.posts[int(post)], score) for post, score in pairs]
 
     return Way("Redis alone, ZUNIONSTORE", read, top)
 
