@@ -1,3 +1,16 @@
+-- Add to the end of a list and prolong its life. APPEND leaves as much room again as the list is long, so a short list
+-- is written anew instead, which takes just what it needs.
+local REWRITTEN_BYTES = 32768
+
+local function append(key, added, ttl_ms)
+  if redis.call('STRLEN', key) + #added <= REWRITTEN_BYTES then
+    redis.call('SET', key, (redis.call('GET', key) or '') .. added, 'PX', ttl_ms)
+  else
+    redis.call('APPEND', key, added)
+    redis.call('PEXPIRE', key, ttl_ms)
+  end
+end
+
 -- Drop a row's leading edges older than `oldest_ms`, and what stands beside them; the lists keep their lifetime.
 local function trim_row(row_key, ids_key, who_key, oldest_ms)
   local head = redis.call('GETRANGE', row_key, 0, 15)
