@@ -98,7 +98,7 @@ def way(address: str, world: Columns) -> Way:
         return [(world.posts[post], score) for post, score in read()]
 
     assert isinstance(connection, psycopg.Connection)  # noqa: S101  for the type checker
-    return Way("PostgreSQL, one SELECT", read, top)
+    return Way("PostgreSQL, one SELECT", read, top, connection.close)
 
 
 def _connected(address: str):  # type: ignore[no-untyped-def]  # noqa: ANN202  a psycopg connection

@@ -8,7 +8,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -51,8 +51,10 @@ def _wait_until_ready(port: int, child: subprocess.Popen[bytes]) -> None:
     while time.monotonic() < until_s and child.poll() is None:
         try:
             connection = http.client.HTTPConnection("127.0.0.1", port, timeout=5)
-            connection.request("GET", "/readyz")
-            if connection.getresponse().status == 200:
+            with closing(connection):
+                connection.request("GET", "/readyz")
+                status = connection.getresponse().status
+            if status == 200:
                 return
         except OSError:
             time.sleep(0.05)

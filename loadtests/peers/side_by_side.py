@@ -58,6 +58,8 @@ async def compare(server: EmbeddedServer, shape: Shape, rounds: int) -> dict[str
             if way.top is not None and not close_enough(expected, way.top()):
                 raise SystemExit(f"the answer of {way.name} is not waxwane's")
         rows = await _timed(ways, {COLD: cold, WARM: warm}, t_ms, rounds)
+        for way in ways:
+            way.close()
     with served.serve(server.url) as process:
         http = served.read_feeds(process, READER, max(400, 20 * rounds))
     await warm.close()

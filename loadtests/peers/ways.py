@@ -23,11 +23,12 @@ _READ_BYTES = 1 << 18
 
 @dataclass(frozen=True)
 class Way:
-    """One way: `read` answers once, `top` gives what it answers as names and scores, to be compared."""
+    """One way: `read` answers once, `top` gives the answer as names and scores, to be compared; `close` hangs up."""
 
     name: str
     read: Callable[[], object]
     top: Callable[[], Top] | None = None
+    close: Callable[[], None] = lambda: None
 
 
 class Socket:
@@ -62,7 +63,7 @@ def floor(path: str, standing: Standing, ranking: Ranking, t_ms: int) -> Way:
         gathering.add([row or b"" for row in rows], standing.affinity, standing.relation)  # type: ignore[attr-defined]
         return gathering.counts()
 
-    return Way("floor", read)
+    return Way("floor", read, close=line.close)
 
 
 def redis_alone(path: str, world: Columns) -> Way:
@@ -99,7 +100,11 @@ def redis_alone(path: str, world: Columns) -> Way:
         pairs = client.zrevrange("scores", 0, TOP - 1, withscores=True)
         return [(world.posts[int(post)], score) for post, score in pairs]
 
-    return Way("Redis alone, ZUNIONSTORE", read, top)
+    def close() -> None:
+        line.close()
+        client.close()
+
+    return Way("Redis alone, ZUNIONSTORE", read, top, close)
 
 
 def plain_python(path: str, standing: Standing, ranking: Ranking, world: Columns) -> Way:
@@ -126,7 +131,10 @@ def plain_python(path: str, standing: Standing, ranking: Ranking, world: Columns
     def know(hash_of: Callable[[str], bytes]) -> None:
         names.update({hash_of(name): place for place, name in enumerate(world.posts)})
 
-    way = Way("plain Python", scores, lambda: [(world.posts[names[post]], score) for score, post in scores()])
+    def top() -> Top:
+        return [(world.posts[names[post]], score) for score, post in scores()]
+
+    way = Way("plain Python", scores, top, client.close)
     know_by[way.name] = know
     return way
 
