@@ -13,7 +13,7 @@ import redis
 from service.embedded import EmbeddedServer
 from service.server_binary import candidates
 from service.store import calls, keys, scripts
-from service.store.calls import Call, EdgeWork, Effect, NewEdge, NewEvent, StoreLimits
+from service.store.calls import Call, Creation, EdgeWork, Effect, NewEdge, NewEvent, StoreLimits
 from tests.lua import globals_of, read_header
 
 FOLDER = Path(inspect.getfile(scripts)).parent / "scripts"
@@ -49,10 +49,14 @@ SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] 
     "learn_author": (lambda: calls.learn_author(A, B, C), (), ()),
     "log_changes": (lambda: calls.log_changes([A, B], [C]), (), ()),
     "purge_posts": (lambda: calls.purge_posts(EFFECT, 1, [A, B], C, NOW_MS, NOW_MS, LIMITS), (2,), ()),
-    "put_creation": (lambda: calls.put_creation(A, 9, B * 2, NOW_MS, LIMITS), (), ()),
+    "put_creations": (
+        lambda: calls.put_creations(1, NOW_MS, LIMITS, [Creation(A, 9, B * 2), Creation(C, 10, B * 2)]),
+        (2,),
+        (2,),
+    ),
     "put_incoming": (lambda: calls.put_incoming(EFFECT, TIE, NOW_MS, marked=True), (), ()),
     "put_outgoing": (lambda: calls.put_outgoing(9, TIE, NOW_MS), (), ()),
-    "put_post": (lambda: calls.put_post(EFFECT, WRITE, NOW_MS, LIMITS), (), ()),
+    "put_posts": (lambda: calls.put_posts(1, NOW_MS, LIMITS, [(EFFECT, WRITE)] * 2), (2,), (2,)),
     "register_kinds": (lambda: calls.register_kinds(["like", "share", "hide"], 9), (), (3,)),
     "settle_event": (lambda: calls.settle_event(A, 9, B), (), ()),
     "settle_interactions": (
@@ -62,12 +66,13 @@ SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] 
     ),
     "sweep_person": (lambda: calls.sweep_person(A, B, NOW_MS, 9, NOW_MS, LIMITS), (), ()),
     "take_erase": (lambda: calls.take_erase(EVENT, NOW_MS, LIMITS), (), ()),
-    "take_event": (lambda: calls.take_event(EVENT, NOW_MS, LIMITS, writes_row=True), (), ()),
+    "take_event": (lambda: calls.take_event(EVENT, NOW_MS, LIMITS, tie_target=B), (), ()),
     "take_interactions": (
         lambda: calls.take_interactions(1, NOW_MS, LIMITS, [(A, "mina", [EDGE]), (B, "joel", [EDGE, EDGE, EDGE])]),
         (2,),
         (2, 4),
     ),
+    "take_posts": (lambda: calls.take_posts(1, NOW_MS, LIMITS, [(EVENT, C)] * 3), (3,), (3,)),
     "take_retract": (lambda: calls.take_retract(EVENT, NOW_MS, LIMITS, C), (), ()),
     "take_seen": (lambda: calls.take_seen(EVENT, NOW_MS, LIMITS, [A, B, C]), (), (3,)),
     "trim_board": (lambda: calls.trim_board(2, 9), (), ()),

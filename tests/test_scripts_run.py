@@ -10,7 +10,7 @@ import pytest
 import redis
 
 from service.store import calls, keys, pieces, scripts
-from service.store.calls import Call, Effect, NewEdge, NewEvent, StoreLimits, TieWrite
+from service.store.calls import Call, Creation, Effect, NewEdge, NewEvent, StoreLimits, TieWrite
 from service.store.pieces import stamp
 from tests.lua import globals_of
 
@@ -91,7 +91,7 @@ def effect(seq: int, low: int = 0) -> Effect:
 def test_which_scripts_need_the_real_server() -> None:
     """Only the scripts that read or write a post's value need the packing library, which the fake store lacks."""
     packing = [name for name in scripts.names() if "struct" in globals_of(scripts.load(name).source)[0]]
-    assert packing == ["add_edges", "purge_posts", "put_post", "withdraw_post"]
+    assert packing == ["add_edges", "purge_posts", "put_posts", "withdraw_post"]
 
 
 def test_an_event_is_taken_once(store: Store) -> None:
@@ -119,8 +119,14 @@ def test_what_an_event_depends_on_comes_first(store: Store) -> None:
     """Outstanding entries that hold the bytes asked for are returned, others are not."""
     store.run(calls.take_event(event(E1), NOW_MS, LIMITS))
     store.run(calls.take_event(event(E2), NOW_MS, LIMITS))
-    answer = store.run(calls.take_event(event(E3), NOW_MS, LIMITS, before=E1))
-    assert answer == [0, SEQ + 2, SEQ - 1, [b"%d<%b>" % (SEQ, E1)]]
+    first, second = event(E3), event(b"another ")
+    answer = store.run(calls.take_posts(7, NOW_MS, LIMITS, [(first, E1), (second, E3)]))
+    assert answer == [
+        [0, SEQ + 2, SEQ - 1, [b"%d<%b>" % (SEQ, E1)]],
+        [0, SEQ + 3, SEQ - 1, [b"%d<%b>" % (SEQ + 2, E3)]],
+    ]
+    again = store.run(calls.take_posts(7, NOW_MS, LIMITS, [(first, E1)]))
+    assert again == [[1, 0, SEQ - 1, [b"%d<%b>" % (SEQ + 2, E3)]]]
 
 
 def test_who_may_not_act(store: Store) -> None:
@@ -140,7 +146,8 @@ def test_limits_of_one_person(store: Store) -> None:
     """Where the row is full, or so many ties stand, an event is refused with 4; a tie that stands may change."""
     numbers = [bytes([number]) * 8 for number in range(1, 6)]
     assert store.run(take(*map(edge, numbers)))[0] == [0, 0, 0, 0, 4]
-    assert store.run(calls.take_event(event(), NOW_MS, LIMITS, writes_row=True)) == [4, 0, 0, []]
+    post = (event(b"another "), PLOT)
+    assert store.run(calls.take_posts(7, NOW_MS, LIMITS, [post])) == [[4, 0, 0, []]]
     for target in (JOEL, ADA):
         store.client.hset(keys.key("tie", MINA), target, stamp(NOW_MS, 1) + b"e")
         store.client.append(keys.key("out", MINA), target + stamp(NOW_MS, 1))
@@ -330,16 +337,20 @@ def test_a_refused_event_is_forgotten(store: Store) -> None:
 
 def test_a_creation_edge_is_written_and_moved(store: Store) -> None:
     """While its entry is open it goes into the author's row, later to its earliest time in the same place."""
-    code, store_edge = 3 | 1 << 14, calls.put_creation
-    assert store.run(store_edge(MINA, SEQ, BED + stamp(NOW_MS, code), NOW_MS, LIMITS)) == 0
+    code = 3 | 1 << 14
+
+    def store_edge(person: bytes, seq: int, edge: bytes, now_ms: int, limits: StoreLimits) -> Call:
+        return calls.put_creations(7, now_ms, limits, [Creation(person, seq, edge)])
+
+    assert store.run(store_edge(MINA, SEQ, BED + stamp(NOW_MS, code), NOW_MS, LIMITS)) == [0]
     store.run(calls.take_event(event(E1), NOW_MS, LIMITS))
     store.run(take(edge(E2)))
-    assert store.run(store_edge(MINA, SEQ, BED + stamp(NOW_MS, code), NOW_MS, LIMITS)) == 1
-    assert store.run(store_edge(MINA, SEQ, BED + stamp(NOW_MS - 7, code), NOW_MS, LIMITS)) == 1
+    assert store.run(store_edge(MINA, SEQ, BED + stamp(NOW_MS, code), NOW_MS, LIMITS)) == [1]
+    assert store.run(store_edge(MINA, SEQ, BED + stamp(NOW_MS - 7, code), NOW_MS, LIMITS)) == [1]
     assert store.person("row") == BED + stamp(NOW_MS, 5) + BED + stamp(NOW_MS - 7, code)
     assert store.person("ids") == E2 + NOBODY
     assert store.person("who") == NOBODY + MINA
-    assert store.run(store_edge(MINA, SEQ, PLOT + stamp(OLDEST_MS - 1, code), NOW_MS, LIMITS)) == 0
+    assert store.run(store_edge(MINA, SEQ, PLOT + stamp(OLDEST_MS - 1, code), NOW_MS, LIMITS)) == [0]
     assert store.person("posts") == BED + stamp(NOW_MS - 7, code) + PLOT + stamp(OLDEST_MS - 1, code)
     assert LIMITS.ttl_ms < store.life_ms("posts") <= 13 * LIMITS.ttl_ms
 

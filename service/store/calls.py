@@ -123,35 +123,36 @@ def take_interactions(
     return Call(load("take_interactions"), script_keys, args)
 
 
+def take_posts(number: int, now_ms: int, limits: StoreLimits, events: Sequence[tuple[NewEvent, bytes]]) -> Call:
+    """Take the post events of one bucket, each with the hash of its post."""
+    script_keys = [keys.seq(number), keys.outbox(number)]
+    args: list[Argument] = [now_ms * 1000, limits.oldest_ms(now_ms), limits.ttl_ms, limits.row_edges]
+    args.append(limits.other_events)
+    for event, post in events:
+        script_keys += [keys.key(name, event.person) for name in ("name", "erased", "ids", "heard", "row", "who")]
+        args += [event.person_id, event.id_hash, event.event_ms, event.piece, post]
+    return Call(load("take_posts"), script_keys, args)
+
+
 def take_event(
-    event: NewEvent,
-    now_ms: int,
-    limits: StoreLimits,
-    *,
-    before: bytes = b"",
-    writes_row: bool = False,
-    tie_target: bytes = b"",
-    lasting: bool = False,
+    event: NewEvent, now_ms: int, limits: StoreLimits, *, tie_target: bytes = b"", lasting: bool = False
 ) -> Call:
-    """Take a post, a tie or a withdrawal.
+    """Take a tie or a withdrawal.
 
     Args:
         event: the event.
         now_ms: now, Unix milliseconds.
         limits: the store's limits.
-        before: outstanding entries holding these bytes are to be settled first.
-        writes_row: the event adds an edge to the person's row.
         tie_target: hash of the person whom a tie is about.
         lasting: an erasure of the person does not undo the event.
 
     """
     number, person = bucket(event.person), event.person
     script_keys = [keys.seq(number), keys.outbox(number)]
-    script_keys += [keys.key(name, person) for name in ("name", "erased", "ids", "heard", "row", "tie", "who", "out")]
+    script_keys += [keys.key(name, person) for name in ("name", "erased", "ids", "heard", "tie", "out")]
     args: list[Argument] = [now_ms * 1000, limits.oldest_ms(now_ms), limits.ttl_ms, event.person_id, event.id_hash]
-    args += [event.event_ms, event.piece, before, limits.row_edges if writes_row else 0]
-    args += [limits.ties if tie_target else 0, tie_target, int(lasting), limits.other_events]
-    return Call(load("take_event"), script_keys, args)
+    args += [event.event_ms, event.piece, limits.ties if tie_target else 0, tie_target]
+    return Call(load("take_event"), script_keys, [*args, int(lasting), limits.other_events])
 
 
 def take_retract(event: NewEvent, now_ms: int, limits: StoreLimits, target: bytes) -> Call:
@@ -220,13 +221,15 @@ class PostWrite:
     creation_code: int
 
 
-def put_post(effect: Effect, write: PostWrite, now_ms: int, limits: StoreLimits) -> Call:
-    """Write a post's record."""
-    number = bucket(write.post)
-    script_keys = [keys.applied(number), keys.key("post", write.post), keys.key("wait", write.post)]
-    args = [*effect.head(), now_ms, limits.ttl_ms, limits.half_lives, write.post_id, write.author_id]
-    args += [write.author, write.event_ms, write.event_id, write.audience, write.form, write.topics]
-    return Call(load("put_post"), script_keys, [*args, write.creation_code])
+def put_posts(number: int, now_ms: int, limits: StoreLimits, writes: Sequence[tuple[Effect, PostWrite]]) -> Call:
+    """Write the records of posts of one bucket."""
+    script_keys = [keys.applied(number)]
+    args: list[Argument] = [now_ms, limits.ttl_ms, limits.half_lives]
+    for effect, write in writes:
+        script_keys += keys.post_keys(write.post)
+        args += [*effect.head(), write.post_id, write.author_id, write.author, write.event_ms, write.event_id]
+        args += [write.audience, write.form, write.topics, write.creation_code]
+    return Call(load("put_posts"), script_keys, args)
 
 
 def withdraw_post(effect: Effect, post: bytes, post_id: str, now_ms: int, limits: StoreLimits) -> Call:
@@ -245,11 +248,23 @@ def purge_posts(
     return Call(load("purge_posts"), script_keys, args)
 
 
-def put_creation(person: bytes, seq: int, edge: bytes, now_ms: int, limits: StoreLimits) -> Call:
-    """Write or move a creation edge in its author's row."""
-    script_keys = [keys.outbox(bucket(person)), *(keys.key(name, person) for name in ("row", "ids", "who", "posts"))]
-    args: list[Argument] = [seq, edge[:8], edge[8:], person, limits.oldest_ms(now_ms), limits.ttl_ms]
-    return Call(load("put_creation"), script_keys, args)
+@dataclass(frozen=True, slots=True)
+class Creation:
+    """A creation edge on its way into its author's row, for the outbox entry with this number."""
+
+    person: bytes
+    seq: int
+    edge: bytes
+
+
+def put_creations(number: int, now_ms: int, limits: StoreLimits, creations: Sequence[Creation]) -> Call:
+    """Write or move creation edges in the rows of one bucket's people."""
+    script_keys = [keys.outbox(number)]
+    args: list[Argument] = [limits.oldest_ms(now_ms), limits.ttl_ms]
+    for one in creations:
+        script_keys += [keys.key(name, one.person) for name in ("row", "ids", "who", "posts")]
+        args += [one.seq, one.edge[:8], one.edge[8:], one.person]
+    return Call(load("put_creations"), script_keys, args)
 
 
 def learn_author(person: bytes, post: bytes, author: bytes) -> Call:

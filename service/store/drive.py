@@ -7,14 +7,14 @@ entry that a crash left open is simply driven again, by whoever sends its events
 from collections.abc import Callable, Coroutine, Sequence
 from dataclasses import dataclass, field
 from itertools import groupby
-from typing import Any
+from typing import Any, TypeVar
 
 import orjson
 
 from scoring.bank import Bank
 from scoring.marks import marks
 from service.store import calls, pieces
-from service.store.calls import Call, EdgeWork, Effect, StoreLimits
+from service.store.calls import Call, Creation, EdgeWork, Effect, PostWrite, StoreLimits
 from service.store.ids import NOBODY, IdHasher, bucket
 from service.store.pieces import Entry, Piece, Swept
 
@@ -34,6 +34,7 @@ class Step:
     """
 
     follow: list[Call] = field(default_factory=list)
+    creations: list[Creation] = field(default_factory=list)
     close: list[Call] = field(default_factory=list)
     people: set[bytes] = field(default_factory=set)
     posts: set[bytes] = field(default_factory=set)
@@ -48,7 +49,15 @@ class Edges:
     work: EdgeWork
 
 
-Far = Sequence[Call | Edges]
+@dataclass(frozen=True, slots=True)
+class Record:
+    """A far effect on a post's record; put together by bucket likewise."""
+
+    effect: Effect
+    write: PostWrite
+
+
+Far = Sequence[Call | Edges | Record]
 Then = Callable[[list[Any]], Step]
 
 
@@ -100,32 +109,46 @@ class Driver:
         for far, then in plans:
             steps.append(then(answers[at : at + len(far)]))
             at += len(far)
-        await self._run([call for step in steps for call in step.follow] + self._raised(steps, now_ms))
+        follow = [call for step in steps for call in step.follow]
+        await self._run(follow + self._created(steps, now_ms) + self._raised(steps, now_ms))
         await self._close(steps, refused=bool(refused))
 
     async def _run_far(self, far: Far, now_ms: int) -> list[Any]:
-        """Run far effects and give the answer of each; those on sums are one call for each bucket."""
-        by_bucket: dict[int, list[tuple[int, EdgeWork]]] = {}
-        plain: list[tuple[int, Call]] = []
-        for place, one in enumerate(far):
-            if isinstance(one, Edges):
-                by_bucket.setdefault(one.bucket, []).append((place, one.work))
-            else:
-                plain.append((place, one))
-        merged = [
-            calls.add_edges(number, now_ms, self._limits, [work for _, work in group])
-            for number, group in by_bucket.items()
-        ]
-        got = await self._run([*merged, *(call for _, call in plain)])
+        """Run far effects and give the answer of each; those on posts are one call for each bucket."""
         answers: list[Any] = [None] * len(far)
-        for group, flat in zip(by_bucket.values(), got, strict=False):
-            at = 0
-            for place, work in group:
-                answers[place] = flat[at : at + len(work.posts)]
-                at += len(work.posts)
-        for (place, _), answer in zip(plain, got[len(merged) :], strict=True):
+        plain = [(place, one) for place, one in enumerate(far) if isinstance(one, Call)]
+        edges, records = (
+            _grouped(far, Edges, lambda one: one.bucket),
+            _grouped(far, Record, lambda one: bucket(one.write.post)),
+        )
+        to_run = [
+            calls.put_posts(number, now_ms, self._limits, [(one.effect, one.write) for _, one in group])
+            for number, group in records.items()
+        ]
+        to_run += [
+            calls.add_edges(number, now_ms, self._limits, [one.work for _, one in group])
+            for number, group in edges.items()
+        ]
+        got = iter(await self._run([*to_run, *(call for _, call in plain)]))
+        for group in records.values():
+            for (place, _), answer in zip(group, next(got), strict=True):
+                answers[place] = answer
+        for edge_group in edges.values():
+            flat, at = next(got), 0
+            for place, one in edge_group:
+                answers[place] = flat[at : at + len(one.work.posts)]
+                at += len(one.work.posts)
+        for (place, _), answer in zip(plain, got, strict=True):
             answers[place] = answer
         return answers
+
+    def _created(self, steps: Sequence[Step], now_ms: int) -> list[Call]:
+        """Write creation edges, one call for each bucket of authors."""
+        by_bucket: dict[int, list[Creation]] = {}
+        for step in steps:
+            for one in step.creations:
+                by_bucket.setdefault(bucket(one.person), []).append(one)
+        return [calls.put_creations(number, now_ms, self._limits, creations) for number, creations in by_bucket.items()]
 
     def _raised(self, steps: Sequence[Step], now_ms: int) -> list[Call]:
         """Raise the places of posts on the boards."""
@@ -215,10 +238,10 @@ class Driver:
         close = [calls.close_entry(entry.bucket, entry.seq)]
         return far, lambda _: Step(close=close, people={person}, posts={post})
 
-    def _post(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
+    def _post(self, entry: Entry, _: int) -> tuple[Far, Then]:
         piece = entry.pieces[0]
         write = read_post_piece(piece, self._hasher)
-        far = [calls.put_post(Effect(entry.bucket, "p", entry.seq, entry.low), write, now_ms, self._limits)]
+        far = [Record(Effect(entry.bucket, "p", entry.seq, entry.low), write)]
 
         def then(answers: list[Any]) -> Step:
             answer = answers[0]
@@ -226,9 +249,9 @@ class Driver:
                 return Step(close=[calls.settle_event(write.author, entry.seq, piece.id_hash)])
             early = {answer[2][i : i + 8] for i in range(0, len(answer[2]), 8)}
             follow = [calls.learn_author(person, write.post, write.author) for person in sorted(early)]
-            follow.append(calls.put_creation(write.author, entry.seq, write.post + answer[1], now_ms, self._limits))
+            creation = Creation(write.author, entry.seq, write.post + answer[1])
             close = [calls.close_entry(entry.bucket, entry.seq)]
-            step = Step(follow, close=close, people={write.author}, posts={write.post})
+            step = Step(follow, [creation], close, {write.author}, {write.post})
             step.values[write.post] = answer[3]
             return step
 
@@ -275,7 +298,7 @@ class Driver:
     def _swept(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
         swept = Swept.read(entry.pieces[0].body)
         edges, posts = self._swept_edges(entry, swept)
-        far: list[Call | Edges] = list(edges)
+        far: list[Call | Edges | Record] = list(edges)
         purges = _hashes_by_bucket(swept.posts)
         purge = Effect(entry.bucket, "u", entry.seq, entry.low)
         far += [
@@ -297,8 +320,8 @@ class Driver:
                     if answer[0] not in (b"", NOBODY):
                         step.follow.append(calls.learn_author(swept.person, post, answer[0]))
             for (_, group), call in zip(purges, answers[len(posts) :], strict=False):
-                step.follow += [
-                    calls.put_creation(swept.person, entry.seq, post + stamp, now_ms, self._limits)
+                step.creations += [
+                    Creation(swept.person, entry.seq, post + stamp)
                     for post, stamp in zip(group, call, strict=True)
                     if stamp != b""
                 ]
@@ -317,6 +340,18 @@ class Driver:
             Edges(number, EdgeWork(effect, [(post, "", by_post[post]) for post in group])) for number, group in groups
         ]
         return far, [group for _, group in groups]
+
+
+Kind = TypeVar("Kind")
+
+
+def _grouped(far: Far, kind: type[Kind], bucket_of: Callable[[Kind], int]) -> dict[int, list[tuple[int, Kind]]]:
+    """Group far effects of a kind by their bucket, with their places."""
+    groups: dict[int, list[tuple[int, Kind]]] = {}
+    for place, one in enumerate(far):
+        if isinstance(one, kind):
+            groups.setdefault(bucket_of(one), []).append((place, one))
+    return groups
 
 
 @dataclass(frozen=True, slots=True)
@@ -359,10 +394,10 @@ def _hashes_by_bucket(hashes: Sequence[bytes]) -> list[tuple[int, list[bytes]]]:
     return list(groups.items())
 
 
-def read_post_piece(piece: Piece, hasher: IdHasher) -> calls.PostWrite:
+def read_post_piece(piece: Piece, hasher: IdHasher) -> PostWrite:
     """Read what a post event's piece says."""
     event = orjson.loads(piece.body[16:])
-    return calls.PostWrite(
+    return PostWrite(
         post=piece.body[8:16],
         post_id=event["post"],
         author=hasher.hash(event["actor"]),

@@ -37,12 +37,13 @@ _REFUSED = {
 
 @dataclass(slots=True)
 class _Take:
-    """One call that takes events, and which events of the batch they are."""
+    """One call that takes events, and which events of the batch they are; `apart`, it has an answer for each."""
 
     bucket: int
     call: Call
     places: list[int]
     pieces: list[bytes]
+    apart: bool = False
 
 
 @dataclass(slots=True)
@@ -147,6 +148,7 @@ class Ingest:
 
     def _takes(self, events: Sequence[AnyEvent], verdicts: dict[int, Verdict], now_ms: int) -> list[_Take]:
         edges: dict[int, dict[bytes, list[int]]] = {}
+        posts: dict[int, list[int]] = {}
         takes = []
         for place, event in enumerate(events):
             if place in verdicts:
@@ -154,10 +156,13 @@ class Ingest:
             person = self._hasher.hash(event.actor)
             if isinstance(event, InteractionEvent):
                 edges.setdefault(bucket(person), {}).setdefault(person, []).append(place)
+            elif isinstance(event, PostEvent):
+                posts.setdefault(bucket(person), []).append(place)
             else:
                 piece = self._piece(event, person)
                 call = self._take(event, NewEvent(person, event.actor, piece[5:13], event.at, piece), now_ms)
                 takes.append(_Take(bucket(person), call, [place], [piece]))
+        takes += [self._take_posts(number, events, places, now_ms) for number, places in posts.items()]
         for number, people in edges.items():
             groups = [
                 (person, events[places[0]].actor, [self._new_edge(events[place], person) for place in places])
@@ -168,6 +173,16 @@ class Ingest:
             takes.append(_Take(number, calls.take_interactions(number, now_ms, self._limits, groups), order, packed))
         # Erasures last, so that an answer counts what they cover as applied.
         return sorted(takes, key=lambda take: take.pieces[0][:1] == pieces.ERASE)
+
+    def _take_posts(self, number: int, events: Sequence[AnyEvent], places: list[int], now_ms: int) -> _Take:
+        taken = []
+        for place in places:
+            event = events[place]
+            person = self._hasher.hash(event.actor)
+            piece = self._piece(event, person)
+            taken.append((NewEvent(person, event.actor, piece[5:13], event.at, piece), piece[13:21]))
+        call = calls.take_posts(number, now_ms, self._limits, taken)
+        return _Take(number, call, places, [new.piece for new, _ in taken], apart=True)
 
     def _new_edge(self, event: AnyEvent, person: bytes) -> NewEdge:
         assert isinstance(event, InteractionEvent)  # noqa: S101  grouped by type just before
@@ -200,8 +215,6 @@ class Ingest:
     def _take(self, event: AnyEvent, new: NewEvent, now_ms: int) -> Call:
         limits, hash_of = self._limits, self._hasher.hash
         match event:
-            case PostEvent():
-                return calls.take_event(new, now_ms, limits, before=hash_of(event.post), writes_row=True)
             case TieEvent():
                 return calls.take_event(new, now_ms, limits, tie_target=hash_of(event.target))
             case WithdrawEvent():
@@ -215,6 +228,10 @@ class Ingest:
                 return calls.take_erase(new, now_ms, limits)
 
     def _read_answer(self, take: _Take, answer: Any, taken: _Taken) -> None:  # noqa: ANN401  a script's answer
+        if take.apart:
+            for place, piece, one in zip(take.places, take.pieces, answer, strict=True):
+                self._read_answer(_Take(take.bucket, take.call, [place], [piece]), one, taken)
+            return
         if isinstance(answer, int):
             answer = [answer, 0, 0, []]
         outcomes, seq, low, unsettled = answer
