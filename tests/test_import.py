@@ -24,15 +24,20 @@ from typer.testing import CliRunner
 
 from service.cli.main import build
 from service.embedded import EmbeddedServer
-from service.engine import Engine
 from service.errors import StoreUnavailable
 from service.events.model import AnyEvent
-from service.importing import batch
+from service.importing import bulk
+from service.importing import windows as reading
 from service.importing.archives import opened
-from service.importing.batch import PAUSES_S, Importer
-from service.importing.lines import LINE_BYTES, Line, batches, read_lines
+from service.importing.bulk import PAUSES_S, BulkImporter
+from service.importing.columns import Reader
+from service.importing.lines import LINE_BYTES
 from service.importing.run import import_files
 from service.importing.summary import Stop, Summary
+from service.importing.windows import windows
+from service.store.bulk import BulkIngest
+from service.store.bulk_columns import Edges
+from service.store.ids import IdHasher
 from service.store.verdict import APPLIED, Verdict
 from tests.polling import until
 
@@ -260,7 +265,8 @@ def test_embedded_store(tmp_path: Path) -> None:
 def seen(path: Path, from_line: int = 1) -> list[tuple[int, bytes | None]]:
     """Numbers and content of all lines that are not blank."""
     with opened(str(path)) as source:
-        return [(line.number, line.content) for some in batches(read_lines(source.stream), from_line) for line in some]
+        read = [some.line(place) for some in windows(source.stream, from_line) for place in range(len(some.lines))]
+        return [(line.number, line.content) for line in read if line.content != b""]
 
 
 @pytest.mark.parametrize("compression", COMPRESSIONS)
@@ -276,11 +282,11 @@ def test_endless_line_takes_no_memory() -> None:
     """A line of 64 MiB is skipped piece by piece."""
     tracemalloc.start()
     try:
-        read = list(read_lines(io.BufferedReader(Endless(64 << 20))))
+        read = list(windows(io.BufferedReader(Endless(64 << 20))))
         peak_bytes = tracemalloc.get_traced_memory()[1]
     finally:
         tracemalloc.stop()
-    assert read == [Line(1, None)]
+    assert [(window.first, window.lines) for window in read] == [(1, [None])]
     assert peak_bytes < 8 << 20
 
 
@@ -312,12 +318,33 @@ def test_ends_of_lines(tmp_path: Path) -> None:
     assert seen(path) == []
 
 
-def test_batches_are_bounded() -> None:
-    """A batch holds at most 1,000 lines, and fewer where they are long."""
-    short = (Line(number, b"1") for number in range(1, 2_502))
-    assert [len(some) for some in batches(short)] == [1_000, 1_000, 501]
-    long = (Line(number, b"x" * LINE_BYTES) for number in range(1, 11))
-    assert [len(some) for some in batches(long)] == [4, 4, 2]
+def test_windows_are_bounded() -> None:
+    """A window holds so many lines, and fewer where they are long."""
+    short = io.BytesIO(b"1\n" * 2_501)
+    assert [len(some.lines) for some in windows(short, most_lines=1_000)] == [1_000, 1_000, 501]
+    long = io.BytesIO((b"x" * 1_000 + b"\n") * 1_000)
+    found = [len(some.lines) for some in windows(long, most_bytes=300_000)]
+    assert sum(found) == 1_000
+    assert max(found[:-1]) <= (300_000 + (1 << 18)) // 1_000
+
+
+def test_a_window_ends_where_a_pipe_pauses() -> None:
+    """Where nothing comes through a pipe, what there is makes a window; lines keep their numbers."""
+    idle = iter([False, True, False, False, False]).__next__
+    found = [(some.first, some.lines) for some in windows(Pieces([b"a\nb\nc", b"d\n", b"e"]), idle=idle)]
+    assert found == [(1, [b"a", b"b"]), (3, [b"cd", b"e"])]
+
+
+class Pieces(io.BytesIO):
+    """A pipe that hands over one piece after the other."""
+
+    def __init__(self, pieces: Sequence[bytes]) -> None:
+        super().__init__()
+        self.pieces = list(pieces)
+
+    def read1(self, _size: int | None = -1, /) -> bytes:
+        """Give the next piece."""
+        return self.pieces.pop(0) if self.pieces else b""
 
 
 class Away:
@@ -328,22 +355,32 @@ class Away:
         self.calls: list[int] = []
         self.pauses: list[float] = []
 
-    def apply(self, events: Sequence[AnyEvent], _now_ms: int) -> list[Verdict]:
+    retention_ms = 30 * DAY_MS
+
+    def apply(self, events: Sequence[AnyEvent] | Edges, _now_ms: int) -> list[Verdict]:
         """Fail, or take the events."""
         self.calls.append(len(events))
         if self.first < len(self.calls) <= self.first + self.failures:
             raise StoreUnavailable
         return [APPLIED] * len(events)
 
+    apply_edges = apply
+
+    def kind_codes(self, kinds: Sequence[str]) -> list[int]:
+        """Know all kinds."""
+        return [0] * len(kinds)
+
     def run(self, path: Path) -> Summary:
         """Import a file."""
         summary = Summary()
-        import_files([str(path)], 1, Importer(self.apply, now_ms, self.pauses.append, summary))
+        importer = BulkImporter(self, now_ms, self.pauses.append, summary)
+        import_files([str(path)], 1, importer, lambda lines: Reader(IdHasher(b"").hash_many).read(lines))
         return summary
 
 
-def test_store_comes_back(tmp_path: Path) -> None:
-    """A batch that failed is sent again after a pause, and counted once."""
+def test_store_comes_back(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A window that failed is sent again after a pause, and counted once."""
+    monkeypatch.setattr(reading, "WINDOW_LINES", 1_000)
     path = tmp_path / "events"
     path.write_bytes(lines([like(number) for number in range(1_500)]))
     away = Away(failures=2, first=1)
@@ -353,8 +390,9 @@ def test_store_comes_back(tmp_path: Path) -> None:
     assert (summary.applied, summary.stop) == (1_500, None)
 
 
-def test_store_stays_away(tmp_path: Path) -> None:
-    """After a bounded number of tries the import stops at the first line of the batch that failed."""
+def test_store_stays_away(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """After a bounded number of tries the import stops at the first line of the window that failed."""
+    monkeypatch.setattr(reading, "WINDOW_LINES", 1_000)
     path = tmp_path / "events"
     path.write_bytes(lines([*[like(number) for number in range(1_000)], b"", b"", like(1_001)]))
     away = Away(failures=99, first=1)
@@ -362,7 +400,7 @@ def test_store_stays_away(tmp_path: Path) -> None:
     assert away.pauses == list(PAUSES_S) == [0.5, 1.0, 2.0, 4.0]
     assert summary.applied == 1_000
     reason = "the store did not answer, 5 times in a row"
-    assert summary.stop == Stop("store", str(path), 1_003, reason)
+    assert summary.stop == Stop("store", str(path), 1_001, reason)
 
 
 @pytest.mark.parametrize(("error", "status"), [(StoreUnavailable, 2), (KeyboardInterrupt, 130)])
@@ -374,8 +412,9 @@ def test_go_on(
     first.write_bytes(lines([like(number) for number in range(1_500)]))
     second.write_bytes(lines([like(2_000)]))
     with monkeypatch.context() as patch:
-        patch.setattr(batch, "PAUSES_S", ())
-        patch.setattr(Engine, "apply", fails_after_one_batch(Engine.apply, error))
+        patch.setattr(bulk, "PAUSES_S", ())
+        patch.setattr(reading, "WINDOW_LINES", 1_000)
+        patch.setattr(BulkIngest, "apply", fails_after_one_window(BulkIngest.apply, error))
         result = CliRunner().invoke(build(), ["import", "--store", redis_db, str(first), str(second)])
     assert result.exit_code == status
     assert "applied    1,000\n" in result.stdout
@@ -385,20 +424,20 @@ def test_go_on(
     assert state(redis_db) == 1_501
 
 
-def fails_after_one_batch(apply: Callable[..., Any], error: type[BaseException]) -> Callable[..., Any]:
+def fails_after_one_window(apply: Callable[..., Any], error: type[BaseException]) -> Callable[..., Any]:
     calls: list[int] = []
 
-    async def run_once(engine: Engine, events: Sequence[AnyEvent], at_ms: int) -> list[Verdict]:
-        calls.append(len(events))
+    async def run_once(ingest: BulkIngest, edges: Edges, at_ms: int) -> Any:
+        calls.append(len(edges))
         if len(calls) > 1:
             raise error
-        return list(await apply(engine, events, at_ms))
+        return await apply(ingest, edges, at_ms)
 
     return run_once
 
 
 def test_interrupted(redis_db: str) -> None:
-    """Ctrl-C ends the import after the batch under way, with the counts so far and the line to go on from."""
+    """Ctrl-C ends the import after what is under way, with the counts so far and the line to go on from."""
     with subprocess.Popen(
         [*COMMAND, "--store", redis_db, "-"],
         stdin=subprocess.PIPE,
@@ -409,14 +448,14 @@ def test_interrupted(redis_db: str) -> None:
         assert process.stdin is not None
         process.stdin.write(lines([like(number) for number in range(1_200)]))
         process.stdin.flush()
-        until(lambda: state(redis_db) == 1_000)
+        until(lambda: state(redis_db) == 1_200)
         process.send_signal(signal.SIGINT)
         assert process.stdout is not None
         assert process.stderr is not None
         report, message = process.stdout.read().decode(), process.stderr.read().decode()
         assert process.wait(20) == 130
-    assert "applied    1,000\n" in report
-    assert message.endswith("go on with: waxwane import --from-line 1001 -\n")
+    assert "applied    1,200\n" in report
+    assert message.endswith("go on with: waxwane import --from-line 1201 -\n")
 
 
 def test_progress_on_a_terminal(redis_db: str, tmp_path: Path) -> None:

@@ -1,5 +1,6 @@
 """The store holds only the keys that service/store/keys.py lists, as it says, and a script touches one hash slot."""
 
+import asyncio
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -16,6 +17,7 @@ from service.store import keys, scripts
 from service.store.calls import Call, trim_board
 from service.store.connection import Connection
 from service.store.ids import bucket
+from tests.bulk_loads import import_apart
 from tests.engines import DAY_MS, running, send
 from tests.worlds import World, random_schedule, random_world
 
@@ -124,6 +126,7 @@ async def test_one_script_touches_one_slot(redis_db: str, monkeypatch: pytest.Mo
     monkeypatch.setattr(Connection, "_pipeline", record)
     async with running(redis_db, world.policy_toml) as engine:
         await fill(engine, world)
+    await asyncio.to_thread(import_apart, redis_db, world, random_world(5).events, 100)
     ran = {call.script.name: call for call in recorded if call.script}
     assert sorted(ran) == scripts.names()
     for call in recorded:

@@ -12,8 +12,10 @@ import redis
 
 from service.embedded import EmbeddedServer
 from service.server_binary import candidates
-from service.store import calls, keys, scripts
+from service.store import bulk_calls, calls, keys, scripts
+from service.store.bulk_calls import PeopleRuns, PostRuns
 from service.store.calls import Call, Creation, EdgeWork, Effect, NewEdge, NewEvent, StoreLimits
+from service.store.pieces import INTERACTION, pack
 from tests.lua import globals_of, read_header
 
 FOLDER = Path(inspect.getfile(scripts)).parent / "scripts"
@@ -34,6 +36,9 @@ PLUS = b"+" + B + A
 WRITE = calls.PostWrite(A, "bed", B, "mina", NOW_MS, "e1", 0, "note", "beans", 1)
 TIE = calls.TieWrite(A, B, "joel", NOW_MS, 1, "e2")
 
+PEOPLE = PeopleRuns([A, B], A + B + C, (A + B) * 3, C * 3, pack(INTERACTION, B * 3) * 3, ["mina", 1, 29, "joel", 2, 58])
+POSTS = PostRuns([A, B], B * 2, b"", C * 2, ["bed", 1, 0, 1, "plot", 1, 0, 1])
+
 SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] = {
     "add_edges": (
         lambda: calls.add_edges(
@@ -45,6 +50,10 @@ SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] 
         (3,),
         (2, 3),
     ),
+    "bulk_add_edges": (lambda: bulk_calls.bulk_add_edges(1, "5e,9,8", NOW_MS, LIMITS, POSTS), (2,), (2,)),
+    "bulk_raise_board": (lambda: bulk_calls.bulk_raise_board(2, 9, 0.5, ["1.5", A, "2.5", B]), (), (2,)),
+    "bulk_read_authors": (lambda: bulk_calls.bulk_read_authors([A, B]), (2,), ()),
+    "bulk_take_interactions": (lambda: bulk_calls.bulk_take_interactions(1, NOW_MS, LIMITS, PEOPLE), (2,), (2,)),
     "drop_relation": (lambda: calls.drop_relation(EFFECT, 1, ("in", "mark"), [A, B, C], A, NOW_MS), (3,), ()),
     "learn_author": (lambda: calls.learn_author(A, B, C), (), ()),
     "log_changes": (lambda: calls.log_changes([A, B], [C]), (), ()),
@@ -117,9 +126,10 @@ def test_the_stub_hands_over_what_the_header_lists(name: str) -> None:
 
 
 def test_each_script_has_one_typed_stub() -> None:
-    """Each script is loaded by exactly one function of service/store/calls.py, which has its name and all types."""
+    """Each script is loaded by exactly one function of the two files of stubs, which has its name and all types."""
     found = []
-    for function in [node for node in ast.parse(inspect.getsource(calls)).body if isinstance(node, ast.FunctionDef)]:
+    bodies = [node for file in (calls, bulk_calls) for node in ast.parse(inspect.getsource(file)).body]
+    for function in [node for node in bodies if isinstance(node, ast.FunctionDef)]:
         loaded = [
             node.args[0].value
             for node in ast.walk(function)
@@ -138,7 +148,7 @@ def test_each_script_has_one_typed_stub() -> None:
 def test_a_script_is_called_only_through_its_stub() -> None:
     """Outside of the stubs and the connection nobody loads a script."""
     for path in FOLDER.parent.parent.rglob("*.py"):
-        if path.name not in {"calls.py", "connection.py", "scripts.py"}:
+        if path.name not in {"calls.py", "bulk_calls.py", "connection.py", "scripts.py"}:
             assert "scripts import load" not in path.read_text(), path
 
 

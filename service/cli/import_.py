@@ -2,10 +2,11 @@
 
 import contextlib
 import shlex
+import sys
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Coroutine, Iterator, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Final
+from typing import Annotated, Any, Final
 
 import orjson
 import typer
@@ -16,16 +17,13 @@ from service.cli.opening import STORE_SETTINGS, Opened, opened
 from service.cli.options import Json, with_settings
 from service.cli.output import print_json, print_table
 from service.errors import InvalidField
-from service.importing.archives import STDIN, Source, check_readable
+from service.importing.archives import STDIN, check_readable
 from service.importing.summary import SHOWN_REJECTED, Rejected, Stop, Summary, as_document, rate_per_s
 from service.settings import Settings
 from service.web import clock
 
-if TYPE_CHECKING:
-    from service.events.model import AnyEvent
-    from service.store.verdict import Verdict
-
 REJECTED: Final = 1
+_TURN_S: Final = 0.0002
 _STOP_STATUS: Final = {"damaged": 1, "store": 2, "interrupted": 130}
 
 Files = Annotated[
@@ -62,7 +60,7 @@ def import_(
     """
     settings = Settings.load(overrides)
     sizes = [check_readable(name) for name in files]
-    with _rejects_file(rejects, files) as on_rejected, opened(settings, background=True) as store:
+    with _rejects_file(rejects, files) as on_rejected, opened(settings, background=False) as store:
         summary = Summary(on_rejected)
         started_s = time.perf_counter()
         with shown_progress(sizes) as progress:
@@ -78,24 +76,40 @@ def import_(
     raise typer.Exit(REJECTED if summary.rejected else 0)
 
 
+@contextlib.contextmanager
+def quick_turns() -> Iterator[None]:
+    """Let threads take turns quickly: the one that feeds the server must not wait for the one that reads ahead."""
+    before_s = sys.getswitchinterval()
+    sys.setswitchinterval(_TURN_S)
+    try:
+        yield
+    finally:
+        sys.setswitchinterval(before_s)
+
+
 def _import(store: Opened, files: Sequence[str], from_line: int, summary: Summary, progress: Progress) -> None:
-    from service.importing.batch import Importer  # noqa: PLC0415  it loads what most commands do without
+    from service.importing.bulk import BulkImporter  # noqa: PLC0415  it loads what most commands do without
+    from service.importing.parsing import Parser  # noqa: PLC0415  the same
     from service.importing.run import import_files  # noqa: PLC0415  the same
+    from service.importing.target import EngineTarget  # noqa: PLC0415  the same
 
-    def apply(events: "Sequence[AnyEvent]", now_ms: int) -> "list[Verdict]":
+    def finish(coroutine: Coroutine[Any, Any, Any]) -> Any:  # noqa: ANN401  whatever it gives
         with interrupts.finishing():
-            return store.run(store.engine.apply(events, now_ms))
+            return store.run(coroutine)
 
-    def on_batch(source: Source) -> None:
-        progress(source.name, source.consumed_bytes, summary)
+    def on_window(name: str, consumed_bytes: int) -> None:
+        store.run(store.engine.store.trim_boards())
+        progress(name, consumed_bytes, summary)
         interrupts.check()
 
     def pause(seconds: float) -> None:
         interrupts.check()
         time.sleep(seconds)
 
-    with Interrupts() as interrupts:
-        import_files(files, from_line, Importer(apply, clock.now_ms, pause, summary), on_batch)
+    target = EngineTarget(store.engine, finish)
+    with Interrupts() as interrupts, Parser(store.engine.store.meta[b"hash_key"]) as parser, quick_turns():
+        importer = BulkImporter(target, clock.now_ms, pause, summary)
+        import_files(files, from_line, importer, parser.read, on_window)
 
 
 @contextlib.contextmanager

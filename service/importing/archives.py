@@ -7,6 +7,7 @@ import importlib
 import importlib.util
 import io
 import lzma
+import select
 import stat
 import sys
 import zlib
@@ -28,6 +29,7 @@ _MAGIC: Final = {
 }
 _HEAD_BYTES: Final = max(map(len, _MAGIC))
 _BUFFER_BYTES: Final = 1 << 16
+_IDLE_S: Final = 0.05
 _ZSTD: Final = "compression.zstd"
 
 DAMAGE: Final = (EOFError, OSError, zlib.error, lzma.LZMAError)
@@ -65,9 +67,18 @@ class Source:
 
     def __init__(self, name: str, file: BinaryIO) -> None:
         self.name = name
+        self._pipe = file if name == STDIN or _is_read_once(name) else None
         head = file.read(_HEAD_BYTES)
         self._counted = _Counted(head, file)
         self.stream = _decompressed(name, compression_of(head), self._counted)
+
+    def is_idle(self) -> bool:
+        """Say whether it is a pipe through which nothing comes at the moment."""
+        if self._pipe is None:
+            return False
+        with contextlib.suppress(OSError, ValueError):
+            return not select.select([self._pipe.fileno()], [], [], _IDLE_S)[0]
+        return False
 
     @property
     def consumed_bytes(self) -> int:

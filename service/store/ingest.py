@@ -237,7 +237,7 @@ class Ingest:
         outcomes, seq, low, unsettled = answer
         outcomes = outcomes if isinstance(outcomes, list) else [outcomes]
         for place, outcome in zip(take.places, outcomes, strict=True):
-            taken.verdicts[place] = _verdict(outcome, self._limits)
+            taken.verdicts[place] = verdict_of(outcome, self._limits)
         taken.in_order += [Entry.read(take.bucket, low, member) for member in unsettled]
         if seq:
             packed = b"".join(piece for piece, outcome in zip(take.pieces, outcomes, strict=True) if outcome == 0)
@@ -272,7 +272,8 @@ def _json(event: AnyEvent, **more: int) -> bytes:
     return orjson.dumps(event.model_dump() | more)
 
 
-def _verdict(outcome: int, limits: StoreLimits) -> Verdict:
+def verdict_of(outcome: int, limits: StoreLimits) -> Verdict:
+    """Put an outcome of the scripts that take interactions into words."""
     if outcome == 4:  # noqa: PLR2004  the scripts' code
         most = (
             f"{limits.ties} ties and, within retention, {limits.row_edges} edges and {limits.other_events} other events"

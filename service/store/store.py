@@ -12,13 +12,14 @@ from service.errors import StoreUnavailable, WaxwaneError
 from service.events.model import AnyEvent
 from service.periodic import Periodic
 from service.store import keys
+from service.store.bulk import BulkIngest
 from service.store.calls import Call, StoreLimits, trim_board
 from service.store.connection import Connection
 from service.store.drive import Driver
 from service.store.ids import BUCKETS, IdHasher
 from service.store.ingest import Ingest
 from service.store.kinds import KindRegistry
-from service.store.pieces import Entry
+from service.store.pieces import SEQ_DIGITS, Entry
 from service.store.verdict import Verdict
 
 FORMAT = "1"
@@ -26,6 +27,8 @@ DAY_MS = 86_400_000
 BOARD_POSTS = 10_000
 _SWEEP_EVERY_S = 5.0
 _SWEEP_AT_ONCE = 100
+_LEFT_ALONE_S = 30
+"""An entry this young may still be at work, as those of an import are for several seconds."""
 
 log = structlog.get_logger(__name__)
 
@@ -100,6 +103,7 @@ class Store:
 
     def _set_up(self) -> None:
         self.driver = Driver(self.run, self.hasher, self.limits, self.options.bank, self.board_slots)
+        self.bulk = BulkIngest(self.run, self.driver, self.limits, self.board_slots, BOARD_POSTS)
         self.ingest = Ingest(
             self.run,
             self.driver,
@@ -139,6 +143,21 @@ class Store:
     async def apply(self, events: Sequence[AnyEvent], now_ms: int) -> list[Verdict]:
         """Apply events; see `Ingest.apply`."""
         return await self.ingest.apply(events, now_ms)
+
+    async def kind_codes(self, kinds: Sequence[str]) -> list[int]:
+        """Register those kinds that loaded policies know.
+
+        Returns:
+            The code of each, -1 where it is not known or the store has no room for it.
+
+        Raises:
+            StoreUnavailable: the store does not answer.
+
+        """
+        known = [kind for kind in kinds if self._known(kind)]
+        await self.kinds.register(known)
+        codes = {kind: self.kinds.code(kind) for kind in known}
+        return [-1 if (code := codes.get(kind)) is None else code for kind in kinds]
 
     async def finish_open_entries(self, now_ms: int) -> int:
         """Drive all outbox entries that are open now.
@@ -198,9 +217,10 @@ class Store:
     async def _sweep(self) -> None:
         """Finish what was open at the sweep before and still is: no one is at work on it."""
         entries = await self._open_entries()
-        left = [entry for entry in entries if entry in self._open_before]
-        self._open_before = frozenset(entries)
         server_time = await self.connection.read("TIME")
+        newest_us = (int(server_time[0]) - _LEFT_ALONE_S) * 1_000_000
+        left = [entry for entry in entries if entry in self._open_before and int(entry[1][:SEQ_DIGITS]) <= newest_us]
+        self._open_before = frozenset(entries)
         if await self._drive_all(left, int(server_time[0]) * 1000):
             log.info("finished_open_entries", entries=len(left))
         await self.trim_boards()

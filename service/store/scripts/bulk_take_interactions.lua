@@ -1,0 +1,164 @@
+-- use: slots, rows, outbox, person
+-- Append whole runs of new interactions to the rows of a bucket's people, as take_interactions.lua does one by one.
+-- KEYS[1] seq:{b} integer · KEYS[2] outbox:{b} sorted set · then 7 for each person:
+--   row, ids, who (packed lists), name, erased (strings), undo, heard (packed lists)
+-- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime of the keys, ms ·
+--   ARGV[4] most edges a person may have · ARGV[5] id hashes of all events, person by person (8 bytes each, none
+--   twice for one person) · ARGV[6] edges beside them (16 bytes each) · ARGV[7] hashes of the posts' authors beside
+--   them (8 bytes each, zeros unknown) · ARGV[8] their outbox pieces, packed · then for each person: id,
+--   number of events, bytes of pieces
+-- Returns {number or 0, low, {place of a person, from 1, and a digit for each event, for those where not all were
+-- taken}, outstanding entries of repeated events}; digits are the outcomes of take_interactions.lua
+-- Costs 5 to 13 commands a person and 4 in all.
+local now_us, oldest_ms, ttl_ms, limit = ARGV[1], tonumber(ARGV[2]), ARGV[3], tonumber(ARGV[4])
+local all_ids, all_edges, all_who, all_pieces = ARGV[5], ARGV[6], ARGV[7], ARGV[8]
+local NOBODY = string.rep('\0', 8)
+-- What has at least this long to live is not prolonged: it makes less than an hour of more than a day to spare.
+local FRESH_MS = tonumber(ttl_ms) - 3600000
+local outstanding, wanted = nil, {}
+local starts, ends, kept, whole, exceptions = {}, {}, {}, true, {}
+
+-- Which outstanding entries hold a repeated event: looked at only where there are any.
+local function note_outstanding(id_hash)
+  outstanding = outstanding or redis.call('ZRANGE', KEYS[2], 0, -1)
+  for i, member in ipairs(outstanding) do
+    if not wanted[i] and string.find(member, id_hash, 17, true) then
+      wanted[i] = true
+    end
+  end
+end
+
+local function judge(person, id_hash, edge_ms)
+  if find_slot(person.ids, id_hash, 8) or find_slot(person.heard, id_hash, 16) then
+    note_outstanding(id_hash)
+    return 1
+  end
+  local refusal = refuse_person(person.name_key, person.erased_key, person.id, edge_ms, ttl_ms)
+  if refusal then
+    return refusal
+  end
+  if person.count >= limit then
+    return 4
+  end
+  person.count = person.count + 1
+  return find_slot(person.undo, id_hash, 16) and 5 or 0
+end
+
+-- Whether a run may be appended as it is; `found` are ids, name, erased, undo and heard.
+local function simple(old, found, id, ids)
+  if found[3] or found[4] or (found[2] and found[2] ~= id) or #old + #ids > 8 * limit then
+    return false
+  end
+  local heard = found[5] or ''
+  if old ~= '' or heard ~= '' then
+    for at = 1, #ids, 8 do
+      local id_hash = string.sub(ids, at, at + 7)
+      if find_slot(old, id_hash, 8) or find_slot(heard, id_hash, 16) then
+        return false
+      end
+    end
+  end
+  return true
+end
+
+local function piece_end(at)
+  local a, b, c, d = string.byte(all_pieces, at + 1, at + 4)
+  return at + 4 + a + b * 256 + c * 65536 + d * 16777216
+end
+
+-- Judge a run event by event. Returns what is to be appended, and the pieces of what is taken.
+local function picked(place, person, ids, edges, who, piece_at)
+  local digits, new_ids, new_edges, new_who, pieces = {}, {}, {}, {}, {}
+  for i = 1, #ids / 8 do
+    local id_hash, edge = string.sub(ids, 8 * i - 7, 8 * i), string.sub(edges, 16 * i - 15, 16 * i)
+    local author, last = string.sub(who, 8 * i - 7, 8 * i), piece_end(piece_at)
+    local outcome = judge(person, id_hash, slot_ms(edge, 1))
+    if outcome == 5 then
+      edge = string.sub(edge, 1, 9) .. string.char(string.byte(edge, 10) + 128) .. string.sub(edge, 11)
+      author = NOBODY
+    elseif outcome == 0 then
+      pieces[#pieces + 1] = string.sub(all_pieces, piece_at, last)
+    end
+    if outcome == 0 or outcome == 5 then
+      new_ids[#new_ids + 1], new_edges[#new_edges + 1], new_who[#new_who + 1] = id_hash, edge, author
+    end
+    digits[i], piece_at = outcome, last + 1
+  end
+  exceptions[#exceptions + 1] = place
+  exceptions[#exceptions + 1] = table.concat(digits)
+  return table.concat(new_ids), table.concat(new_edges), table.concat(new_who), table.concat(pieces)
+end
+
+local function keep_name(name_key, known, id)
+  if not known then
+    redis.call('SET', name_key, id, 'PX', ttl_ms)
+  elseif redis.call('PTTL', name_key) >= 0 then
+    redis.call('PEXPIRE', name_key, ttl_ms)
+  end
+end
+
+local function append(k, old, edges, ids, who)
+  local row_key, ids_key, who_key = KEYS[k], KEYS[k + 1], KEYS[k + 2]
+  if not old then
+    redis.call('SET', row_key, edges, 'PX', ttl_ms)
+    redis.call('SET', ids_key, ids, 'PX', ttl_ms)
+    redis.call('SET', who_key, who, 'PX', ttl_ms)
+    return
+  end
+  redis.call('APPEND', row_key, edges)
+  redis.call('APPEND', ids_key, ids)
+  redis.call('APPEND', who_key, who)
+  if redis.call('PTTL', row_key) < FRESH_MS then
+    redis.call('PEXPIRE', row_key, ttl_ms)
+    redis.call('PEXPIRE', ids_key, ttl_ms)
+    redis.call('PEXPIRE', who_key, ttl_ms)
+    keep_name(KEYS[k + 3], true)
+  end
+end
+
+local function row_begins_ms(row_key)
+  local head = redis.call('GETRANGE', row_key, 0, 15)
+  return #head == 16 and slot_ms(head, 1) or math.huge
+end
+
+local at, piece_at = 1, 1
+for place = 1, (#KEYS - 2) / 7 do
+  local k, a = 7 * place - 4, 3 * place + 6
+  local last, piece_last = at + ARGV[a + 1] - 1, piece_at + ARGV[a + 2] - 1
+  local ids, edges = string.sub(all_ids, 8 * at - 7, 8 * last), string.sub(all_edges, 16 * at - 15, 16 * last)
+  local who = string.sub(all_who, 8 * at - 7, 8 * last)
+  local found = redis.call('MGET', KEYS[k + 1], KEYS[k + 3], KEYS[k + 4], KEYS[k + 5], KEYS[k + 6])
+  local old = found[1]
+  if old and row_begins_ms(KEYS[k]) < oldest_ms then
+    trim_row(KEYS[k], KEYS[k + 1], KEYS[k + 2], oldest_ms)
+    old = redis.call('GET', KEYS[k + 1])
+  end
+  if simple(old or '', found, ARGV[a], ids) then
+    if not old or not found[2] then
+      keep_name(KEYS[k + 3], found[2], ARGV[a])
+    end
+    starts[place], ends[place] = piece_at, piece_last
+  else
+    local person = { ids = old or '', count = #(old or '') / 8, undo = found[4] or '', heard = found[5] or '',
+      id = ARGV[a], name_key = KEYS[k + 3], erased_key = KEYS[k + 4] }
+    ids, edges, who, kept[place] = picked(place, person, ids, edges, who, piece_at)
+    whole = false
+  end
+  if ids ~= '' then
+    append(k, old, edges, ids, who)
+  end
+  at, piece_at = last + 1, piece_last + 1
+end
+
+local pieces = all_pieces
+if not whole then
+  for place = 1, (#KEYS - 2) / 7 do
+    kept[place] = kept[place] or string.sub(all_pieces, starts[place], ends[place])
+  end
+  pieces = table.concat(kept)
+end
+local seq, unsettled = pieces ~= '' and put_outbox(KEYS[1], KEYS[2], now_us, pieces) or 0, {}
+for i, member in ipairs(outstanding or {}) do
+  unsettled[#unsettled + 1] = wanted[i] and member or nil
+end
+return { seq, outbox_low(KEYS[2]), exceptions, unsettled }
