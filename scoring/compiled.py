@@ -58,6 +58,10 @@ class Who(Structure):
         ("relation", c_char_p),
         ("marks", c_int64),
         ("mark", c_char_p),
+        ("forms_length", c_int64),
+        ("forms", c_char_p),
+        ("topics_length", c_int64),
+        ("topics", c_char_p),
     )
 
 
@@ -66,6 +70,7 @@ _SIGNATURES: Final[dict[str, tuple[Any, tuple[Any, ...]]]] = {
     "gather_free": (None, (_ANY,)),
     "gather_reset": (None, (_ANY,)),
     "gather_add": (c_int, (_ANY, POINTER(Rule), _INT, _ANY, _ANY, _ANY, _ANY, _NUMBER)),
+    "gather_insert": (c_int, (_ANY, _INT, _ANY)),
     "gather_counts": (None, (_ANY, _ANY)),
     "gather_candidates": (_INT, (_ANY, _ANY, _ANY, _ANY, _ANY)),
     "choose_bounds": (

@@ -69,12 +69,18 @@ class Reader:
         reader: The reader's hash.
         circle: The reader's circle.
         marks: Who befriended or blocks the reader, packed: 16 bytes each, a hash and a stamp with the relation's code.
+        forms: Only posts of one of these forms are found; all where there are none.
+        topics: Only posts with one of these topics are found; all where there are none.
     """
 
-    def __init__(self, reader: int, circle: Circle, marks: bytes) -> None:
-        self._held = (hashes(circle.person), circle.relation.tobytes(), marks)
-        person, relation, _ = self._held
-        self.who = Who(reader, len(circle.person), person, relation, len(marks) // 16, marks)
+    def __init__(
+        self, reader: int, circle: Circle, marks: bytes, forms: Sequence[str] = (), topics: Sequence[str] = ()
+    ) -> None:
+        asked = ("\n".join(forms).encode(), "\n".join(topics).encode())
+        self._held = (hashes(circle.person), circle.relation.tobytes(), marks, *asked)
+        person, relation, *_ = self._held
+        size, lengths_and_texts = len(circle.person), [part for text in asked for part in (len(text), text)]
+        self.who = Who(reader, size, person, relation, len(marks) // 16, marks, *lengths_and_texts)
 
 
 class Gathering:
@@ -84,11 +90,13 @@ class Gathering:
         ranking: The compiled policy.
         t_ms: The time of the feed, Unix milliseconds.
         posts: About how many posts there will be.
+        stranger: Affinity of the crowd; None takes the policy's.
     """
 
-    def __init__(self, ranking: Ranking, t_ms: int, posts: int = 0) -> None:
-        self._rule: Rule = ranking.rule
-        self._stranger = ranking.policy.affinity.crowd
+    def __init__(self, ranking: Ranking, t_ms: int, posts: int = 0, stranger: float | None = None) -> None:
+        self._rule = Rule.from_buffer_copy(ranking.rule)
+        self._stranger = ranking.policy.affinity.crowd if stranger is None else stranger
+        self._rule.stranger = self._stranger
         self._ranking = ranking
         self._t_ms = float(t_ms)
         self._values: list[bytes] = []
@@ -130,6 +138,10 @@ class Gathering:
                 self._t_ms,
             )
         )
+
+    def insert(self, posts: NDArray[np.uint64]) -> None:
+        """Make posts candidates that no edge of the circle has brought; shape (n,), hashes."""
+        check(passes.gather_insert(self._handle, len(posts), hashes(posts)))
 
     def counts(self) -> tuple[int, int, int]:
         """Return how many posts, edges and markers of erasures the rows held."""

@@ -8,11 +8,21 @@ from typing import Any
 from scoring.bank import DEFAULT_BANK, Bank
 from service.events.model import AnyEvent
 from service.feed.cache import WorkerCache
+from service.feed.deadline import Deadline
 from service.feed.explain import Explainer
 from service.feed.export import Exporter
 from service.feed.policies import PolicyBook
+from service.feed.popular import Popular
 from service.feed.ranker import Ranker
-from service.feed.types import ExplainRequest, Explanation, FeedAnswer, FeedRequest, PolicyInfo
+from service.feed.types import (
+    ExplainRequest,
+    Explanation,
+    FeedAnswer,
+    FeedRequest,
+    PolicyInfo,
+    PopularAnswer,
+    PopularRequest,
+)
 from service.periodic import Periodic
 from service.settings import Settings, SettingsError
 from service.store.calls import Call
@@ -100,6 +110,7 @@ class Engine:
         await self.store.start(sweep=background)
         self._ranker = Ranker(self.store, self._policies, self._cache, self._budget_ms)
         self._explainer = Explainer(self.store, self._policies, self._ranker)
+        self._popular = Popular(self.store, self._policies, self._ranker)
         self._exporter = Exporter(self.store)
         await self._load_policies()
         if background:
@@ -117,6 +128,11 @@ class Engine:
     async def feed(self, request: FeedRequest, now_ms: int, arrived_s: float | None = None) -> FeedAnswer:
         """Rank a page of a feed; see `service.feed.ranker.Ranker.feed`."""
         return await self._ranker.feed(request, now_ms, time.perf_counter() if arrived_s is None else arrived_s)
+
+    async def popular(self, request: PopularRequest, now_ms: int, arrived_s: float | None = None) -> PopularAnswer:
+        """Rank what counts most for everybody; see `service.feed.popular.Popular.popular`."""
+        deadline = Deadline(self._budget_ms, time.perf_counter() if arrived_s is None else arrived_s)
+        return await self._popular.popular(request, now_ms, deadline)
 
     async def explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         """Take a score apart; see `service.feed.explain.Explainer.explain`."""

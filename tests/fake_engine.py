@@ -15,6 +15,8 @@ from service.feed.types import (
     FeedItem,
     FeedRequest,
     PolicyInfo,
+    PopularAnswer,
+    PopularRequest,
     TiePart,
 )
 from service.store.verdict import APPLIED, DUPLICATE, EXPIRED, Verdict
@@ -62,6 +64,14 @@ class FakeEngine:
         at_ms = request.as_of_ms or now_ms
         stages_ms = {"state": 0.25, "rank": 1.5}
         return FeedAnswer(request.reader, at_ms, "allotments", True, items, None, stages_ms)
+
+    async def popular(self, request: PopularRequest, now_ms: int, arrived_s: float) -> PopularAnswer:
+        """List the posts, newest first."""
+        self._ask(request, now_ms, arrived_s)
+        self._known(request.policy)
+        posts = [event for event in self.events.values() if isinstance(event, PostEvent)]
+        items = [FeedItem(post.post, post.actor, post.form, post.at, 3.0) for post in posts[: request.k]]
+        return PopularAnswer(request.as_of_ms or now_ms, "allotments", True, items, {"reader": 0.25})
 
     async def explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         """Give the same parts for every post."""

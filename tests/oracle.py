@@ -60,6 +60,7 @@ class Post:
     created_ms: int
     form: str
     audience: str
+    topics: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -250,6 +251,18 @@ class Oracle:
             scores = dict(self._ranked({post: self.score(reader, post, t_ms) for post in scores}))
         return list(scores.items())[:k]
 
+    def popular(self, t_ms: int, reader: str | None = None) -> list[tuple[str, float]]:
+        """Return the posts for everyone by the sum over all their edges, without those the reader may not see."""
+        sums = {
+            post: math.fsum(
+                self.weight(edge.kind) * self.freshness(t_ms - edge.at_ms) for edge in self.edges if edge.post == post
+            )
+            for post, held in self.posts.items()
+            if held.audience == "everyone" and post not in self.withdrawn
+            if reader is None or self.visible(reader, post)
+        }
+        return self._ranked(sums)
+
     def _newest_first(self, post: str) -> tuple[int, bytes]:
         return -self.posts[post].created_ms, post.encode()
 
@@ -304,7 +317,8 @@ def _posts(events: Iterable[Event]) -> dict[str, Post]:
     for post, versions in by_post.items():
         last = max(versions, key=stands_after)
         created_ms = min(event["at"] for event in versions)
-        posts[post] = Post(last["actor"], created_ms, last["form"], last.get("audience", "everyone"))
+        audience, topics = last.get("audience", "everyone"), tuple(last.get("topics", ()))
+        posts[post] = Post(last["actor"], created_ms, last["form"], audience, topics)
     return posts
 
 

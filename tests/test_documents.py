@@ -29,7 +29,9 @@ RETENTION_MS = 30 * 86_400_000
 BASE_URL = "http://127.0.0.1:8321"
 ANSWERS: dict[str, type[BaseModel]] = {
     "applied": schemas.EventsAnswer,
-    "items": schemas.FeedPage,
+    "next": schemas.FeedPage,
+    "items": schemas.PopularPage,
+    "why": schemas.Post,
     "parts": schemas.ExplanationAnswer,
     "title": schemas.Problem,
 }

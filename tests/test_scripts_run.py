@@ -89,9 +89,9 @@ def effect(seq: int, low: int = 0) -> Effect:
 
 
 def test_which_scripts_need_the_real_server() -> None:
-    """Only the scripts that read or write a post's value need the packing library, which the fake store lacks."""
+    """Only scripts that read or write a post's value need the packing library, which the fake store lacks."""
     packing = [name for name in scripts.names() if "struct" in globals_of(scripts.load(name).source)[0]]
-    assert packing == ["add_edges", "purge_posts", "put_posts", "withdraw_post"]
+    assert packing == ["add_edges", "bulk_add_edges", "purge_posts", "put_posts", "withdraw_post"]
 
 
 def test_an_event_is_taken_once(store: Store) -> None:

@@ -32,23 +32,22 @@ async def _copy(source: asyncio.StreamReader, target: asyncio.StreamWriter) -> N
 @asynccontextmanager
 async def door_to(socket: str, tls: ssl.SSLContext | None = None) -> AsyncIterator[int]:
     """Open a TCP port, with TLS where a context is given, that leads to a unix socket."""
-    open_ones = asyncio.Semaphore(100)
+    open_ones: list[asyncio.Task[None] | None] = []
 
     async def serve(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        async with open_ones:
-            inner_reader, inner_writer = await asyncio.open_unix_connection(socket)
-            await asyncio.gather(_copy(reader, inner_writer), _copy(inner_reader, writer), return_exceptions=True)
-            for one in (writer, inner_writer):
-                with suppress(OSError):
-                    await one.wait_closed()
+        open_ones.append(asyncio.current_task())
+        inner_reader, inner_writer = await asyncio.open_unix_connection(socket)
+        await asyncio.gather(_copy(reader, inner_writer), _copy(inner_reader, writer), return_exceptions=True)
+        for one in (writer, inner_writer):
+            with suppress(OSError):
+                await one.wait_closed()
 
     server = await asyncio.start_server(serve, "127.0.0.1", 0, ssl=tls)
     try:
         yield server.sockets[0].getsockname()[1]
     finally:
         server.close()
-        for _ in range(100):  # until all that were open are closed
-            await open_ones.acquire()
+        await asyncio.gather(*filter(None, open_ones))
 
 
 async def _same_feed(url: str) -> None:
@@ -91,10 +90,15 @@ async def test_a_server_that_is_not_there(tmp_path: Path) -> None:
 
 async def test_a_server_that_hangs_is_not_waited_for(tmp_path: Path) -> None:
     """A server that takes the connection and never answers costs a read its timeout, no more."""
+    answering: list[asyncio.Task[None] | None] = []
 
     async def silent(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-        await reader.read()
+        answering.append(asyncio.current_task())
+        with suppress(OSError):
+            await reader.read()
         writer.close()
+        with suppress(OSError):
+            await writer.wait_closed()
 
     server = await asyncio.start_unix_server(silent, str(tmp_path / "hangs.sock"))
     engine = make_engine(f"unix://{tmp_path}/hangs.sock", BUILT_IN_POLICY.read_text(), timeout_s=0.05)
@@ -106,3 +110,4 @@ async def test_a_server_that_hangs_is_not_waited_for(tmp_path: Path) -> None:
     assert asyncio.get_running_loop().time() - begun_s < 5
     await engine.close()
     server.close()
+    await asyncio.gather(*filter(None, answering))

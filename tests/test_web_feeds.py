@@ -8,7 +8,7 @@ import pytest
 from fastapi.testclient import TestClient
 
 from service.errors import CursorExpired, CursorInvalid
-from service.feed.types import ExplainRequest, FeedRequest
+from service.feed.types import ExplainRequest, FeedRequest, PopularRequest
 from service.web.examples import EVENTS
 from service.web.middleware import IdConvertor
 from tests.fake_engine import FakeEngine
@@ -42,6 +42,48 @@ def test_every_parameter(client: TestClient, engine: FakeEngine) -> None:
     assert asked(client, engine, url) == FeedRequest(
         "joel", 200, 12.5, "newest", "abc", "allotments", NOW_MS + DAY_MS, explore=False
     )
+
+
+def test_forms_topics_and_reasons_are_asked_for(client: TestClient, engine: FakeEngine) -> None:
+    """Lists have commas between their names; a reason is asked for with 1, and each post has a place for it then."""
+    url = "/v1/feeds/joel?form=note,photo&topics=beans,s%C3%BC%C3%9F&why=1"
+    request = asked(client, engine, url)
+    assert (request.forms, request.topics, request.why) == (("note", "photo"), ("beans", "süß"), True)
+    client.post("/v1/events", json=EVENTS["post"])
+    assert [item["why"] for item in client.get(url).json()["items"]] == [None]
+
+
+@pytest.mark.parametrize(
+    ("query", "field"),
+    [
+        ("form=", "form"),
+        ("form=note,", "form"),
+        ("form=a.b", "form"),
+        ("topics=" + ",".join(["beans"] * 17), "topics"),
+        ("topics=" + "b" * 65, "topics"),
+        ("why=2", "why"),
+    ],
+)
+def test_wrong_forms_topics_and_reasons(client: TestClient, query: str, field: str) -> None:
+    """A name that is none, too many of them, or a reason asked for with anything but 0 and 1 is refused by name."""
+    problem = is_problem(client.get(f"/v1/feeds/joel?{query}"), 422)
+    assert problem["errors"][0]["field"].startswith(field)
+
+
+def test_popular(client: TestClient, engine: FakeEngine) -> None:
+    """What is popular takes its own parameters, and refuses those of a feed."""
+    client.post("/v1/events", json=EVENTS["post"])
+    answer = client.get("/v1/popular?k=3&reader=joel&form=photo&topics=beans")
+    assert answer.json() == {
+        "as_of": "2026-05-04T09:00:00.000Z",
+        "policy": "allotments",
+        "complete": True,
+        "items": [
+            {"post": "p1", "author": "mina", "form": "photo", "posted_at": "2026-05-04T08:15:00.000Z", "score": 3.0}
+        ],
+    }
+    assert engine.asked[-1][0] == PopularRequest(3, "joel", None, None, ("photo",), ("beans",))
+    assert is_problem(client.get("/v1/popular?cursor=abc"), 422)["errors"][0]["field"] == "cursor"
 
 
 def test_a_page(client: TestClient) -> None:

@@ -144,6 +144,17 @@ int gather_add(Gathering *g, const Rule *rule, int64_t count, const char *rows, 
     return status;
 }
 
+/* Make posts candidates that no edge of the circle has brought. */
+int gather_insert(Gathering *g, int64_t count, const uint64_t *posts) {
+    int status = make_room(g, count);
+    for (int64_t i = 0; i < count && status == FINE; i++) {
+        Cell *cell = cell_of(g, posts[i]);
+        if (cell->newest_ms == -INFINITY)
+            cell->newest_ms = 0.0;
+    }
+    return status;
+}
+
 /* Copy out how many posts, edges and marker entries there are. */
 void gather_counts(const Gathering *g, int64_t *counts) {
     counts[0] = g->posts, counts[1] = g->edges, counts[2] = g->markers;

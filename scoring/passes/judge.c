@@ -50,6 +50,29 @@ static int lets_through(const Who *who, const Post *post) {
     }
 }
 
+/* Whether one of the items, which have newlines between, is on the list, which has too. */
+static int any_listed(const char *list, int64_t list_length, const char *items, int64_t items_length) {
+    for (int64_t start = 0, end; start < items_length; start = end + 1) {
+        const char *stop = memchr(items + start, '\n', (size_t)(items_length - start));
+        end = stop ? stop - items : items_length;
+        for (int64_t from = 0, to; from < list_length; from = to + 1) {
+            const char *rest = memchr(list + from, '\n', (size_t)(list_length - from));
+            to = rest ? rest - list : list_length;
+            if (to - from == end - start && !memcmp(list + from, items + start, (size_t)(to - from)))
+                return 1;
+        }
+    }
+    return 0;
+}
+
+/* Whether a post has one of the forms and one of the topics that are asked for. */
+static int asked_for(const Who *who, const char *value, const Post *post) {
+    return (!who->forms_length ||
+            any_listed(who->forms, who->forms_length, value + post->form_at, post->form_length)) &&
+           (!who->topics_length ||
+            any_listed(who->topics, who->topics_length, value + post->topics_at, post->topics_length));
+}
+
 /* The weighted, decayed sum over every edge of a post. */
 static int crowd_of(const Rule *rule, const char *value, const Post *post, double t_ms, double *crowd) {
     double sum = 0.0;
@@ -99,7 +122,7 @@ int judge(Gathering *g, const Rule *rule, const Who *who, int64_t count, const u
         int status = read_post(values, lengths[i], rule->terms, &post);
         if (status != FINE)
             return status;
-        if (!lets_through(who, &post))
+        if (!lets_through(who, &post) || !asked_for(who, values, &post))
             continue;
         const Cell *cell = &g->cell[place];
         double crowd, left = 0.0;

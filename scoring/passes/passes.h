@@ -35,6 +35,10 @@ typedef struct {
     const uint8_t *relation;  /* of the reader to each */
     int64_t marks;            /* pairs of hash and stamp: who befriended or blocks the reader */
     const uint64_t *mark;
+    int64_t forms_length;     /* what is asked for, with newlines between; length 0: everything */
+    const char *forms;
+    int64_t topics_length;
+    const char *topics;
 } Who;
 
 /* One post with an edge by somebody of the circle. */

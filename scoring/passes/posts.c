@@ -26,8 +26,10 @@ int read_post(const char *value, int64_t length, int64_t terms, Post *post) {
         return BROKEN_VALUE;
     post->flags = (unsigned char)value[1], post->audience = (unsigned char)value[2];
     post->edges = u16(value + 4), post->kinds = u16(value + 6), post->id_length = u16(value + 8);
-    int64_t texts = (unsigned char)value[3] + post->id_length + u16(value + 10) + u16(value + 12) + u16(value + 14);
-    post->edges_at = POST_HEADER + texts + 8 * u16(value + 16);
+    post->form_length = (unsigned char)value[3], post->topics_length = u16(value + 14);
+    post->form_at = POST_HEADER + post->id_length + u16(value + 10);
+    post->topics_at = post->form_at + post->form_length + u16(value + 12);
+    post->edges_at = post->topics_at + post->topics_length + 8 * u16(value + 16);
     post->sums_at = post->edges_at + 8 * post->edges;
     post->posted_ms = f64(value + 20);
     post->author = u64(value + 36);

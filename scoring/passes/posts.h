@@ -10,6 +10,7 @@
 typedef struct {
     int flags, audience;
     int64_t edges, kinds, id_length, edges_at, sums_at;
+    int64_t form_at, form_length, topics_at, topics_length;
     uint64_t author;
     double posted_ms;
 } Post;

@@ -2,19 +2,29 @@
 
 from typing import Any
 
-from service.feed.types import CrowdPart, Explanation, FeedAnswer, FeedItem, TiePart
+from service.feed.types import CrowdPart, Explanation, FeedAnswer, FeedItem, PopularAnswer, Reason, TiePart
 from service.times import format_ms
 
 
-def page_document(answer: FeedAnswer) -> dict[str, Any]:
-    """Write a page of a feed."""
+def page_document(answer: FeedAnswer, *, why: bool = False) -> dict[str, Any]:
+    """Write a page of a feed, with the reason for each post where it was asked for."""
     return {
         "reader": answer.reader,
         "as_of": format_ms(answer.as_of_ms),
         "policy": answer.policy,
         "complete": answer.complete,
-        "items": [_item(item) for item in answer.items],
+        "items": [_item(item, why=why) for item in answer.items],
         "next": answer.next,
+    }
+
+
+def popular_document(answer: PopularAnswer) -> dict[str, Any]:
+    """Write what is popular."""
+    return {
+        "as_of": format_ms(answer.as_of_ms),
+        "policy": answer.policy,
+        "complete": answer.complete,
+        "items": [_item(item, why=False) for item in answer.items],
     }
 
 
@@ -31,13 +41,27 @@ def explanation_document(explanation: Explanation) -> dict[str, Any]:
     }
 
 
-def _item(item: FeedItem) -> dict[str, Any]:
-    return {
+def _item(item: FeedItem, *, why: bool) -> dict[str, Any]:
+    document: dict[str, Any] = {
         "post": item.post,
         "author": item.author,
         "form": item.form,
         "posted_at": format_ms(item.posted_ms),
         "score": item.score,
+    }
+    if why:
+        document["why"] = None if item.why is None else _reason(item.why)
+    return document
+
+
+def _reason(reason: Reason) -> dict[str, Any]:
+    return {
+        "actor": reason.actor,
+        "relation": reason.relation,
+        "kind": reason.kind,
+        "at": format_ms(reason.at_ms),
+        "age_s": reason.age_ms // 1000,
+        "product": reason.product,
     }
 
 

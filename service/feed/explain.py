@@ -9,12 +9,13 @@ from scoring.reduce import by_ties, edge_terms, remainder
 from service.errors import NotFound
 from service.feed.deadline import Deadline
 from service.feed.policies import PolicyBook
-from service.feed.ranker import Ranker, View
+from service.feed.ranker import Ranker
 from service.feed.readers import hash_number
+from service.feed.reasons import names_of
 from service.feed.sums import crowd_sums
 from service.feed.types import CrowdPart, ExplainRequest, Explanation, Factor, TiePart
+from service.feed.view import View
 from service.feed.visible import Gate
-from service.store import keys
 from service.store.records import PostRecord
 from service.store.store import Store
 
@@ -68,7 +69,7 @@ class Explainer:
         """Give a part for each edge by someone known, and the share of all of them in the crowd."""
         terms = edge_terms(edges, view.circle, view.ranking, t_ms)
         people = view.circle.person[edges.row]
-        names = await self._names(people.tolist())
+        names = await names_of(self._store.connection, people.tolist())
         reader = hash_number(view.reader.hash)
         columns = zip(
             people.tolist(),
@@ -94,14 +95,6 @@ class Explainer:
         ]
         parts.sort(key=lambda part: (-part.product, part.at_ms, part.actor))
         return parts, float(np.sum(terms.weight * terms.crowd_freshness))
-
-    async def _names(self, people: list[int]) -> dict[int, str]:
-        distinct = sorted(set(people))
-        if not distinct:
-            return {}
-        hashes = [person.to_bytes(8, "little") for person in distinct]
-        names = await self._store.connection.mget(keys.keys("name", hashes))
-        return {person: name.decode() if name else "" for person, name in zip(distinct, names, strict=True)}
 
     def _crowd(self, view: View, record: PostRecord, share: float, t_ms: int) -> CrowdPart:
         total = crowd_sums([record], view.ranking, t_ms)

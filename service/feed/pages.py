@@ -42,6 +42,7 @@ class Session:
         order: of all pages.
         explore: whether randomness is on.
         policy: name of the policy.
+        asked_by: who reads, and what forms and topics; its cursors are good for nothing else.
         carried: hashes of what the first page served, as far as its cursor holds them.
 
     """
@@ -52,6 +53,7 @@ class Session:
     order: Order
     explore: bool
     policy: str
+    asked_by: bytes = b""
     carried: tuple[bytes, ...] = ()
 
     @property
@@ -62,7 +64,13 @@ class Session:
 
 def new_session(request: FeedRequest, as_of_ms: int, policy: str) -> Session:
     """Begin a session."""
-    return Session(os.urandom(8), 0, as_of_ms, request.order, request.explore, policy)
+    return Session(os.urandom(8), 0, as_of_ms, request.order, request.explore, policy, _asked_by(request))
+
+
+def _asked_by(request: FeedRequest) -> bytes:
+    """Write who reads and what is asked for, so that no two differ in one only by where a part ends."""
+    lists = ([request.reader], sorted(request.forms), sorted(request.topics))
+    return b"".join(len(text).to_bytes(4, "little") + text for text in ["\n".join(names).encode() for names in lists])
 
 
 class CursorBook:
@@ -78,12 +86,12 @@ class CursorBook:
         self._connection = connection
         self._secret = secret
 
-    def write(self, session: Session, reader: str, offset: int, carried: Sequence[bytes], now_ms: int) -> str:
+    def write(self, session: Session, offset: int, carried: Sequence[bytes], now_ms: int) -> str:
         """Write the cursor of the page that starts at `offset`; `carried` are the posts it holds itself."""
         order, explore = _ORDERS.index(session.order), int(session.explore)
         body = _BODY.pack(_VERSION, session.key, offset, session.as_of_ms, now_ms, order, explore, len(carried))
         body += b"".join(carried) + session.policy.encode()
-        return urlsafe_b64encode(self._sign(body, reader) + body).rstrip(b"=").decode()
+        return urlsafe_b64encode(self._sign(body, session.asked_by) + body).rstrip(b"=").decode()
 
     def read(self, request: FeedRequest, now_ms: int) -> Session:
         """Read the cursor of a request. The time of its first page holds for all pages, whatever `as_of` says.
@@ -99,14 +107,16 @@ class CursorBook:
         except (Base64Error, ValueError) as error:
             raise CursorInvalid(cursor) from error
         signature, body = data[:_SIGNATURE_BYTES], data[_SIGNATURE_BYTES:]
-        if len(body) < _BODY.size or not compare_digest(signature, self._sign(body, request.reader)):
-            raise CursorInvalid(cursor, "it was changed, or it belongs to another reader")
+        asked_by = _asked_by(request)
+        if len(body) < _BODY.size or not compare_digest(signature, self._sign(body, asked_by)):
+            raise CursorInvalid(cursor, "it was changed, or it belongs to another reader, or to other forms or topics")
         version, key, offset, as_of_ms, issued_ms, order, explore, count = _BODY.unpack_from(body)
         if version != _VERSION:
             raise CursorInvalid(cursor)
         policy_at = _BODY.size + 8 * count
         carried = tuple(body[at : at + 8] for at in range(_BODY.size, policy_at, 8))
-        session = Session(key, offset, as_of_ms, _ORDERS[order], bool(explore), body[policy_at:].decode(), carried)
+        policy = body[policy_at:].decode()
+        session = Session(key, offset, as_of_ms, _ORDERS[order], bool(explore), policy, asked_by, carried)
         if request.order != session.order or request.policy not in (None, session.policy):
             raise CursorInvalid(cursor, "order and policy must be those of its first page")
         if now_ms - issued_ms > KEPT_MS:
@@ -132,9 +142,5 @@ class CursorBook:
         """Keep what a session has served."""
         await self._connection.read("SET", keys.key("page", session.key), b"".join(served), "PX", KEPT_MS)
 
-    def _sign(self, body: bytes, reader: str) -> bytes:
-        reader_bytes = reader.encode()
-        head = len(reader_bytes).to_bytes(4, "little")
-        return blake2b(
-            head + reader_bytes + body, digest_size=_SIGNATURE_BYTES, key=self._secret, person=b"cursor"
-        ).digest()
+    def _sign(self, body: bytes, asked_by: bytes) -> bytes:
+        return blake2b(asked_by + body, digest_size=_SIGNATURE_BYTES, key=self._secret, person=b"cursor").digest()

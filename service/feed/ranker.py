@@ -1,7 +1,7 @@
 """A feed read: the reader's state, the circle's rows, the reduction, the look-ups, the page."""
 
 from collections.abc import Awaitable, Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import TypeVar
 
 import numpy as np
@@ -10,17 +10,19 @@ from numpy.typing import NDArray
 from scoring.affinity import Circle
 from scoring.arrange import keep_apart
 from scoring.compiled import UnknownCodeError
-from scoring.edges import EdgeRows, erasures, join_rows, live
+from scoring.edges import erasures, join_rows
 from scoring.gathering import Bounds, Gathering, Reader
 from scoring.ranking import Ranking
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
 from service.feed.pages import CARRIED, CursorBook, Session, new_session
-from service.feed.policies import PolicyBook, PreparedPolicy
+from service.feed.policies import PolicyBook
 from service.feed.readers import Readers, ReaderState, Standing, hash_number
 from service.feed.reads import Reads
+from service.feed.reasons import reasons
 from service.feed.shortlist import Found, Shortlist, Shortlister
 from service.feed.types import FeedAnswer, FeedItem, FeedRequest
+from service.feed.view import View
 from service.store.records import author_of, read_item
 from service.store.store import Store
 
@@ -35,35 +37,6 @@ EDGES_A_PERSON = 60
 
 ROWS_SHARE = 0.7
 """How much of the budget fetching rows may use up: the rest is for looking up the best."""
-
-
-@dataclass(frozen=True, slots=True)
-class View:
-    """All that a reader's feed is ranked from.
-
-    `rows` are those of the first people of the standing; `whole` is False where the deadline passed before all came.
-    """
-
-    reader: ReaderState
-    standing: Standing
-    rows: list[bytes]
-    prepared: PreparedPolicy
-    whole: bool
-
-    @property
-    def ranking(self) -> Ranking:
-        """The compiled policy."""
-        return self.prepared.ranking
-
-    @property
-    def circle(self) -> Circle:
-        """The reader's circle."""
-        return self.standing.circle
-
-    def edges(self) -> EdgeRows:
-        """Decode the edges that count; `row` is the place of the actor in the circle."""
-        joined = join_rows(self.rows)
-        return live(EdgeRows(joined.post, joined.stamp, self.standing.order[joined.row]))
 
 
 class Ranker:
@@ -82,7 +55,7 @@ class Ranker:
         self._policies = policies
         self._budget_ms = budget_ms
         self.reads = Reads(store.connection, cache)
-        self._readers = Readers(self.reads, cache.size)
+        self.readers = Readers(self.reads, cache.size)
         self._cursors = CursorBook(store.connection, store.meta[b"hash_key"])
 
     async def feed(self, request: FeedRequest, now_ms: int, arrived_s: float) -> FeedAnswer:
@@ -123,7 +96,7 @@ class Ranker:
             gathering.only(again)
         elif before:
             gathering.without(before)
-        reader = Reader(hash_number(view.reader.hash), view.circle, view.reader.marks)
+        reader = Reader(hash_number(view.reader.hash), view.circle, view.reader.marks, request.forms, request.topics)
         shortlister = Shortlister(self.reads, reader, gathering, deadline)
         chosen, certain, more = await self._choose(request, session, view.ranking, shortlister, before)
         if again:
@@ -132,13 +105,13 @@ class Ranker:
             more = True
         deadline.stage("shortlist")
         page = again or [one.hash for one in chosen]
-        cursor = await self._next(request, session, served, page, now_ms) if more else None
+        cursor = await self._next(session, served, page, now_ms) if more else None
         return FeedAnswer(
             reader=request.reader,
             as_of_ms=session.as_of_ms,
             policy=session.policy,
             complete=certain and view.whole,
-            items=[_item(one, session) for one in chosen],
+            items=await self._items(request, session, view, chosen),
             next=cursor,
             stages_ms=deadline.stages_ms,
         )
@@ -163,10 +136,10 @@ class Ranker:
             StoreUnavailable: the store does not answer.
 
         """
-        state = await self._readers.load(reader, self._store.hasher.hash(reader), profile=profile)
+        state = await self.readers.load(reader, self._store.hasher.hash(reader), profile=profile)
         deadline.stage("reader")
         prepared = self._policies.prepared(policy, self._store.kinds.names)
-        standing = self._readers.standing(state, prepared.ranking, t_ms)
+        standing = self.readers.standing(state, prepared.ranking, t_ms)
         gathering = Gathering(prepared.ranking, t_ms, EDGES_A_PERSON * len(standing.people))
         rows = await self._rows(standing, gathering, deadline)
         view = View(state, standing, rows, prepared, len(rows) == len(standing.people))
@@ -238,22 +211,29 @@ class Ranker:
         chosen = shortlist.found[: request.k] if picked is None else picked
         return chosen, picked is not None, not shortlist.exhausted or shortlist.total > len(chosen)
 
+    async def _items(self, request: FeedRequest, session: Session, view: View, chosen: list[Found]) -> list[FeedItem]:
+        items = [_item(one, session) for one in chosen]
+        if request.why and items:
+            posts, kinds = [one.hash for one in chosen], self._store.kinds.names
+            found = await reasons(view, posts, kinds, self._store.connection, session.as_of_ms)
+            for item, one in zip(items, chosen, strict=True):
+                item.why = found.get(one.hash)
+        return items
+
     async def _recent_authors(self, gap: int, before: list[bytes]) -> list[bytes]:
         if not gap or not before:
             return []
         records = await self.reads.records(before[-gap:])
         return [record.author_hash if record else b"" for record in records]
 
-    async def _next(
-        self, request: FeedRequest, session: Session, served: list[bytes], page: list[bytes], now_ms: int
-    ) -> str:
+    async def _next(self, session: Session, served: list[bytes], page: list[bytes], now_ms: int) -> str:
         """Write the cursor of the page after this one, and keep this one where the cursor can't hold it."""
         end = session.offset + len(page)
         if not session.offset and end <= CARRIED:
-            return self._cursors.write(session, request.reader, end, page, now_ms)
+            return self._cursors.write(session, end, page, now_ms)
         if end > len(served):
             await self._cursors.keep(session, served[: session.offset] + page)
-        return self._cursors.write(session, request.reader, end, [], now_ms)
+        return self._cursors.write(session, end, [], now_ms)
 
     async def _without_erased(self, view: View, gathering: Gathering, t_ms: int) -> tuple[View, Gathering]:
         """Gather anew without the reader's dealings with people since erased, where there are any."""

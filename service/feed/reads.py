@@ -62,6 +62,17 @@ class Reads:
         self._cache = cache
         self._boards: dict[int, _HeldBoard] = {}
 
+    async def begin(self) -> None:
+        """Begin a read that is nobody's: take into account what has changed.
+
+        Raises:
+            StoreUnavailable: the store does not answer.
+
+        """
+        follower = self._cache.follower
+        asked_at = follower.position
+        self._cache.take(asked_at, await self._connection.read_many(follower.commands()))
+
     async def own(self, person_keys: Sequence[bytes]) -> list[bytes]:
         """Begin a read: fetch the reader's own strings, and take into account what has changed.
 

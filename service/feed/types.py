@@ -19,6 +19,9 @@ class FeedRequest:
         policy: name of a loaded policy; None takes the reader's assigned one.
         as_of_ms: rank as at this time, Unix milliseconds; None is now.
         explore: False switches the policy's randomness off.
+        forms: only posts of one of these forms; all where there are none.
+        topics: only posts with one of these topics; all where there are none.
+        why: also give the strongest edge of each post.
 
     """
 
@@ -30,6 +33,9 @@ class FeedRequest:
     policy: str | None = None
     as_of_ms: int | None = None
     explore: bool = True
+    forms: tuple[str, ...] = ()
+    topics: tuple[str, ...] = ()
+    why: bool = False
 
 
 @dataclass(slots=True)
@@ -44,6 +50,19 @@ class FeedItem:
     form: str
     posted_ms: int
     score: float | None
+    why: "Reason | None" = None
+
+
+@dataclass(frozen=True, slots=True)
+class Reason:
+    """The edge by someone the reader knows that adds most to a post's score; `age_ms` is at the time of the feed."""
+
+    actor: str
+    kind: str
+    at_ms: int
+    age_ms: int
+    relation: str
+    product: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,6 +79,42 @@ class FeedAnswer:
     complete: bool
     items: list[FeedItem]
     next: str | None
+    stages_ms: dict[str, float] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class PopularRequest:
+    """Ask for the posts that count most for everybody.
+
+    Args:
+        k: how many posts, 1 to 200.
+        reader: whose blocks and mutes hold, and whose own posts are left out; None is nobody's.
+        policy: name of a loaded policy; None takes the default.
+        as_of_ms: rank as at this time, Unix milliseconds; None is now.
+        forms: only posts of one of these forms; all where there are none.
+        topics: only posts with one of these topics; all where there are none.
+
+    """
+
+    k: int = 20
+    reader: str | None = None
+    policy: str | None = None
+    as_of_ms: int | None = None
+    forms: tuple[str, ...] = ()
+    topics: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class PopularAnswer:
+    """The posts that count most for everybody; a score is the sum over all edges of weight times freshness.
+
+    `complete` is True only where the items are certainly the exact top k.
+    """
+
+    as_of_ms: int
+    policy: str
+    complete: bool
+    items: list[FeedItem]
     stages_ms: dict[str, float] = field(default_factory=dict)
 
 

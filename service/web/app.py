@@ -13,6 +13,7 @@ from service.web import (
     routes_health,
     routes_people,
     routes_policies,
+    routes_popular,
 )
 from service.web.middleware import Observe, RawPath
 from service.web.port import FeedEngine, Limits, WebSettings
@@ -35,7 +36,7 @@ def create_app(engine: FeedEngine | None = None, settings: WebSettings | None = 
     state = WebState(engine, settings or Limits())
     app = FastAPI(lifespan=_lifespan, docs_url=None, redoc_url=None, openapi_url=None, redirect_slashes=False)
     put_state(app, state)
-    for routes in (routes_events, routes_feeds, routes_people, routes_policies, routes_health):
+    for routes in (routes_events, routes_feeds, routes_popular, routes_people, routes_policies, routes_health):
         app.include_router(routes.router)
     problems.install(app)
     openapi.install(app)

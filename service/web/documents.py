@@ -44,6 +44,7 @@ METRICS_ANSWER: Final[dict[int | str, Schema]] = {
 _EXAMPLES: Final[dict[type[BaseModel], Any]] = {
     schemas.EventsAnswer: examples.EVENTS_ANSWER,
     schemas.FeedPage: examples.FEED,
+    schemas.PopularPage: {name: examples.FEED[name] for name in ("as_of", "policy", "complete", "items")},
     schemas.ExplanationAnswer: examples.EXPLANATION,
     schemas.PersonAnswer: {"person": "joel"},
     schemas.PolicyAnswer: examples.POLICY,

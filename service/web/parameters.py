@@ -9,7 +9,7 @@ from pydantic import BaseModel, BeforeValidator, Field, TypeAdapter, ValidationE
 
 from service import times
 from service.errors import InvalidField
-from service.events.fields import NO_CONTROLS, TIME_SCHEMA, Id, not_allowed
+from service.events.fields import NO_CONTROLS, TIME_SCHEMA, TOPICS_MAX, Form, Id, Topic, not_allowed
 
 AHEAD_MS: Final = 30 * 24 * 60 * 60 * 1000
 SKEW_MS: Final = 60 * 1000
@@ -39,11 +39,29 @@ Budget = Annotated[float, Field(ge=1, le=BUDGET_MAX_MS, allow_inf_nan=False)]
 Cursor = Annotated[str, Field(min_length=1, max_length=CURSOR_CHARS, pattern=NO_CONTROLS)]
 
 
+def _names(value: Any) -> Any:  # noqa: ANN401  as above
+    return tuple(value.split(",")) if isinstance(value, str) else value
+
+
+_LISTED: Final = WithJsonSchema({"type": "string", "minLength": 1, "maxLength": 1024})
+FormList = Annotated[tuple[Form, ...], BeforeValidator(_names), Field(max_length=TOPICS_MAX), _LISTED]
+TopicList = Annotated[tuple[Topic, ...], BeforeValidator(_names), Field(max_length=TOPICS_MAX), _LISTED]
+
+
 class ExplainQuery(BaseModel):
     """The parameters of an explanation."""
 
     policy: Id | None = Field(None, description="name of a loaded policy; the reader's assigned one if left out")
     as_of: AsOf = Field(None, description="rank as at this time, from now to 30 days ahead")
+
+
+class PopularQuery(ExplainQuery):
+    """The parameters of what is popular."""
+
+    k: Annotated[int, Whole] = Field(20, ge=1, le=K_MAX, description="how many posts")
+    reader: Id | None = Field(None, description="whose blocks and mutes hold, and whose own posts are left out")
+    form: FormList = Field((), description="only posts of these forms, with commas between")
+    topics: TopicList = Field((), description="only posts with one of these topics, with commas between")
 
 
 class FeedQuery(ExplainQuery):
@@ -56,6 +74,9 @@ class FeedQuery(ExplainQuery):
     order: Literal["ranked", "newest"] = Field("ranked", description="newest uses no profile of the reader")
     cursor: Cursor | None = Field(None, description="`next` of the page before")
     explore: Annotated[int, Whole] = Field(1, ge=0, le=1, description="0 switches the randomness off")
+    form: FormList = Field((), description="only posts of these forms, with commas between")
+    topics: TopicList = Field((), description="only posts with one of these topics, with commas between")
+    why: Annotated[int, Whole] = Field(0, ge=0, le=1, description="1 adds the strongest edge of each post")
 
 
 _PATH_ID: Final[TypeAdapter[str]] = TypeAdapter(Id)

@@ -5,7 +5,15 @@ from dataclasses import dataclass
 from typing import Any, Protocol
 
 from service.events.model import AnyEvent
-from service.feed.types import ExplainRequest, Explanation, FeedAnswer, FeedRequest, PolicyInfo
+from service.feed.types import (
+    ExplainRequest,
+    Explanation,
+    FeedAnswer,
+    FeedRequest,
+    PolicyInfo,
+    PopularAnswer,
+    PopularRequest,
+)
 from service.store.verdict import Verdict
 
 
@@ -26,6 +34,9 @@ class FeedEngine(Protocol):
 
     async def feed(self, request: FeedRequest, now_ms: int, arrived_s: float) -> FeedAnswer:
         """Rank a page; `arrived_s` is when the call arrived, on the clock of `time.perf_counter`."""
+
+    async def popular(self, request: PopularRequest, now_ms: int, arrived_s: float) -> PopularAnswer:
+        """Rank what counts most for everybody."""
 
     async def explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         """Say why a post has its score; raise `NotFound` where the reader may not see it."""

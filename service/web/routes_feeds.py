@@ -43,7 +43,9 @@ async def read_feed(request: Request, reader: PathId, query: Annotated[FeedQuery
     feed_request = _feed_request(reader, query, now_ms)
     answer = await state_of(request).engine.feed(feed_request, now_ms, arrived_s(request.scope))
     headers = {"Server-Timing": _server_timing(answer.stages_ms, clock.since_ms(arrived_s(request.scope)))}
-    return Response(orjson.dumps(page_document(answer)), headers=headers, media_type="application/json")
+    return Response(
+        orjson.dumps(page_document(answer, why=feed_request.why)), headers=headers, media_type="application/json"
+    )
 
 
 router.include_router(_feeds)
@@ -76,6 +78,9 @@ def _feed_request(reader: str, query: FeedQuery, now_ms: int) -> FeedRequest:
         policy=query.policy,
         as_of_ms=query.as_of if query.cursor else as_of_within(query.as_of, now_ms),
         explore=query.explore == 1,
+        forms=query.form,
+        topics=query.topics,
+        why=query.why == 1,
     )
 
 

@@ -30,6 +30,17 @@ class EventsAnswer(Answer):
     rejected: list[RejectedEvent]
 
 
+class Why(Answer):
+    """The edge by someone the reader knows that adds most to a post's score."""
+
+    actor: str
+    relation: Literal["follow", "friend", "none"] = Field(description="the reader's to the actor")
+    kind: str
+    at: Time
+    age_s: int = Field(ge=0, description="its age at the time of the feed, seconds")
+    product: float = Field(description="affinity times weight times freshness")
+
+
 class Post(Answer):
     """A post of a feed."""
 
@@ -38,6 +49,7 @@ class Post(Answer):
     form: str
     posted_at: Time
     score: float | None = Field(description="null where the order is newest")
+    why: Why | None = Field(None, description="only with why=1; null where only strangers brought the post")
 
 
 class FeedPage(Answer):
@@ -49,6 +61,15 @@ class FeedPage(Answer):
     complete: bool = Field(description="true only where this is certainly the exact top k")
     items: list[Post]
     next: str | None = Field(description="the cursor of the next page; null at the end")
+
+
+class PopularPage(Answer):
+    """What counts most for everybody."""
+
+    as_of: Time
+    policy: str
+    complete: bool = Field(description="true only where this is certainly the exact top k")
+    items: list[Post] = Field(description="a score is the sum over all edges of weight times freshness")
 
 
 class TiePart(Answer):
