@@ -12,7 +12,14 @@ from tests.web_client import client, engine
 
 __all__ = ["client", "engine"]
 
-V1 = ["/v1/events", "/v1/feeds/{reader}", "/v1/feeds/{reader}/posts/{post}", "/v1/people/{person}", "/v1/policies", "/v1/popular"]
+V1 = [
+    "/v1/events",
+    "/v1/feeds/{reader}",
+    "/v1/feeds/{reader}/posts/{post}",
+    "/v1/people/{person}",
+    "/v1/policies",
+    "/v1/popular",
+]
 
 
 @pytest.fixture

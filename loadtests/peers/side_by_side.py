@@ -73,9 +73,9 @@ async def compare(server: EmbeddedServer, shape: Shape, rounds: int) -> dict[str
 
 async def _ways(path: str, engine: Engine, world: Columns, address: str | None) -> list[Way]:
     ranker, hasher = engine._ranker, engine.store.hasher  # noqa: SLF001  the same rows as the engine reads
-    state = await ranker._readers.load(READER, hasher.hash(READER), profile=True)  # noqa: SLF001  as above
+    state = await ranker.readers.load(READER, hasher.hash(READER), profile=True)
     ranking = ranker._policies.prepared(None, engine.store.kinds.names).ranking  # noqa: SLF001  as above
-    standing = ranker._readers.standing(state, ranking, world.t_ms)  # noqa: SLF001  as above
+    standing = ranker.readers.standing(state, ranking, world.t_ms)
     ways = [floor(path, standing, ranking, world.t_ms), redis_alone(path, world)]
     ways.append(plain_python(path, standing, ranking, world))
     for know in know_by.values():
