@@ -183,8 +183,9 @@ class Gathering:
         check(passes.choose_newest(self._handle))
 
     def without(self, posts: Sequence[bytes]) -> None:
-        """Leave posts out."""
-        passes.choose_without(self._handle, len(posts), b"".join(posts))
+        """Leave posts out, given by hashes, singly or several in a row."""
+        packed = b"".join(posts)
+        passes.choose_without(self._handle, len(packed) // 8, packed)
 
     def only(self, posts: Sequence[bytes]) -> None:
         """Leave out all but these posts."""

@@ -183,8 +183,19 @@ class Oracle:
                 return 1.0
         return float(self.policy.get("seen", {}).get("factor", 1.0))
 
+    def hidden(self, reader: str, post: str) -> bool:
+        """Say whether the reader did something with a post whose gain is negative, and has not taken it back."""
+        gains = self.policy["affinity"].get("gain", {})
+        return any(
+            (look_up(edge.kind, gains) or 0.0) < 0.0
+            for edge in self.interactions
+            if edge.actor == reader and edge.post == post
+        )
+
     def score(self, reader: str, post: str, t_ms: int) -> float:
-        """Return the score of a post for a reader at a time, the seen factor included."""
+        """Return the score of a post for a reader at a time, the factors of seen and of hidden posts included."""
+        if self.hidden(reader, post):
+            return 0.0
         products = [self._product(reader, edge, t_ms) for edge in self.edges if edge.post == post]
         return self.seen_factor(reader, post) * math.fsum(products)
 
@@ -246,6 +257,8 @@ class Oracle:
         In order `newest` there are no scores.
         """
         eligible = [post for post in self.posts if self.eligible(reader, post)]
+        if order == "ranked":
+            eligible = [post for post in eligible if not self.hidden(reader, post)]
         scores: dict[str, float | None] = dict.fromkeys(sorted(eligible, key=self._newest_first))
         if order == "ranked":
             scores = dict(self._ranked({post: self.score(reader, post, t_ms) for post in scores}))

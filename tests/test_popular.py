@@ -7,7 +7,8 @@ import pytest
 from service.engine import Engine
 from service.errors import CursorInvalid
 from service.feed import board
-from service.feed.types import FeedRequest, PopularAnswer, PopularRequest
+from service.feed.types import ExplainRequest, FeedRequest, PopularAnswer, PopularRequest
+from service.settings import BUILT_IN_POLICY
 from tests.engines import ranked, running, send
 from tests.oracle import Oracle, assert_same_feed
 from tests.worlds import World, random_world
@@ -144,3 +145,31 @@ async def test_the_reason_is_the_strongest_edge_of_somebody_known(redis_db: str,
                 told = (item.why.actor, item.why.kind, item.why.at_ms)
                 assert told in [(one["actor"], one["kind"], one["at"]) for one in parts if one["product"] > 0.0]
                 assert item.why.relation == oracle.relation(reader, item.why.actor)
+
+
+async def test_a_hidden_post_is_dropped_until_the_hiding_is_taken_back(redis_db: str) -> None:
+    """`hide` drops the post and lowers its author until `retract` restores both; newest first knows no profile."""
+    now_ms = 1_777_885_200_000
+    hours_ago = now_ms - 3_600_000
+    events = [
+        {"id": "t", "type": "tie", "at": hours_ago, "actor": "joel", "target": "mina", "relation": "friend"},
+        *(
+            {"id": f"p{n}", "type": "post", "at": hours_ago, "actor": "mina", "post": f"bed {n}", "form": "note"}
+            for n in (1, 2)
+        ),
+    ]
+    hide = {"id": "h", "type": "interaction", "at": now_ms, "actor": "joel", "post": "bed 1", "kind": "hide"}
+    async with running(redis_db, BUILT_IN_POLICY.read_text()) as engine:
+        await send(engine, events, now_ms)
+        before = dict(await ranked(engine, "joel", now_ms))
+        await send(engine, [hide], now_ms)
+        after = dict(await ranked(engine, "joel", now_ms))
+        assert set(before) == {"bed 1", "bed 2"}
+        assert set(after) == {"bed 2"}
+        assert after["bed 2"] == pytest.approx((before["bed 2"] or 0.0) / 2, rel=1e-9)  # affinity 2 - 1
+        assert [post for post, _ in await ranked(engine, "joel", now_ms, order="newest")] == ["bed 1", "bed 2"]
+        explained = await engine.explain(ExplainRequest("joel", "bed 1"), now_ms)
+        assert [(one.name, one.value) for one in explained.factors] == [("seen", 1.0), ("hidden", 0.0)]
+        assert explained.score == 0.0
+        await send(engine, [{"id": "r", "type": "retract", "at": now_ms, "actor": "joel", "event": "h"}], now_ms)
+        assert dict(await ranked(engine, "joel", now_ms)) == before

@@ -61,9 +61,11 @@ class Explainer:
         edges = edges.select(edges.post == np.uint64(hash_number(post)))
         ties, share = await self._parts(view, edges, t_ms)
         crowd = self._crowd(view, record, share, t_ms)
-        factor = _seen_factor(view, edges, hash_number(post))
-        total = (sum(part.product for part in ties) + crowd.product) * factor
-        return Explanation(request.reader, request.post, t_ms, policy, total, [Factor("seen", factor)], ties, crowd)
+        factors = _factors(view, edges, hash_number(post))
+        total = sum(part.product for part in ties) + crowd.product
+        for factor in factors:
+            total *= factor.value
+        return Explanation(request.reader, request.post, t_ms, policy, total, factors, ties, crowd)
 
     async def _parts(self, view: View, edges: EdgeRows, t_ms: int) -> tuple[list[TiePart], float]:
         """Give a part for each edge by someone known, and the share of all of them in the crowd."""
@@ -101,6 +103,14 @@ class Explainer:
         left = float(remainder(total, np.array([share]))[0])
         stranger = view.ranking.policy.affinity.crowd
         return CrowdPart(stranger, left, stranger * left)
+
+
+def _factors(view: View, edges: EdgeRows, post: int) -> list[Factor]:
+    """Give what the sum is multiplied by: the seen factor, and 0 for a post that the reader wants no more."""
+    factors = [Factor("seen", _seen_factor(view, edges, post))]
+    if post in view.reader.hidden(view.ranking).tolist():
+        factors.append(Factor("hidden", 0.0))
+    return factors
 
 
 def _seen_factor(view: View, edges: EdgeRows, post: int) -> float:

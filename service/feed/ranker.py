@@ -96,6 +96,8 @@ class Ranker:
             gathering.only(again)
         elif before:
             gathering.without(before)
+        if profile and len(hidden := view.reader.hidden(view.ranking)):
+            gathering.without([hidden.tobytes()])
         reader = Reader(hash_number(view.reader.hash), view.circle, view.reader.marks, request.forms, request.topics)
         shortlister = Shortlister(self.reads, reader, gathering, deadline)
         chosen, certain, more = await self._choose(request, session, view.ranking, shortlister, before)

@@ -42,6 +42,15 @@ class ReaderState:
     seen_post: NDArray[np.uint64]
     seen_ms: NDArray[np.float64]
 
+    def hidden(self, ranking: Ranking) -> NDArray[np.uint64]:
+        """Give the posts with which the reader did something whose gain is negative under a policy: hashes, shape (h,).
+
+        They are dropped from the reader's feed until the interaction is taken back.
+        """
+        dealings = self.known.dealings
+        posts: NDArray[np.uint64] = self.dealt_post[ranking.gains_of(dealings.code) < 0.0]
+        return posts
+
     @property
     def blocked_by(self) -> frozenset[int]:
         """Hashes of who blocks the reader."""
