@@ -21,6 +21,7 @@ from service.cli.options import Json, with_settings
 from service.cli.output import print_json, print_table
 from service.embedded import EmbeddedServer
 from service.settings import Settings, describe, to_environment, unknown_variables
+from service.web.arrival import ArrivalProtocol
 
 APPLICATION = "service.worker:create_app"
 METRICS_VARIABLE = "PROMETHEUS_MULTIPROC_DIR"
@@ -125,7 +126,7 @@ def _configuration(settings: Settings, application: str) -> uvicorn.Config:
         port=settings.port,
         workers=settings.workers,
         loop="uvloop",
-        http="httptools",
+        http=ArrivalProtocol,
         log_config=None,
         access_log=False,
         server_header=False,

@@ -10,9 +10,9 @@ from starlette.convertors import Convertor, register_url_convertor
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service.web import problems
+from service.web.arrival import ARRIVED
 from service.web.metrics import WebMetrics
 
-ARRIVED: Final = "arrived_s"
 UNMATCHED: Final = "unmatched"
 _METHODS: Final = frozenset({"GET", "HEAD", "POST", "PUT", "DELETE", "PATCH", "OPTIONS"})
 _NOSNIFF: Final = (b"x-content-type-options", b"nosniff")
@@ -72,8 +72,7 @@ class Observe:
         if scope["type"] != "http":
             await self.app(scope, receive, send)
             return
-        start_s = time.perf_counter()
-        scope.setdefault("state", {})[ARRIVED] = start_s
+        start_s = scope.setdefault("state", {}).setdefault(ARRIVED, time.perf_counter())
         answer = _Answer(send)
         try:
             await self._guarded(scope, receive, answer)
