@@ -14,6 +14,8 @@ from service.store import keys
 
 _CODE_BITS = np.uint64(0xFFFF)
 _ORDER_KEPT_MS = 60_000
+_NO_POSTS = np.empty(0, dtype=np.uint64)
+_NO_DEALINGS = Dealings(_NO_POSTS, np.empty(0, dtype=np.intp), np.empty(0))
 _FIELDS = ("row", "who", "out", "mark", "seen", "name")
 
 
@@ -194,6 +196,8 @@ def _decoded(reader: bytes, own: list[bytes]) -> ReaderState:
 
 def read_dealings(row: bytes, who: bytes) -> tuple[Dealings, NDArray[np.uint64]]:
     """Read from a person's row and its authors the interactions with posts by known authors."""
+    if not row or not who:
+        return _NO_DEALINGS, _NO_POSTS
     edges, author = np.frombuffer(row, dtype=EDGE), np.frombuffer(who, dtype="<u8")
     length = min(len(edges), len(author))
     edges, author = edges[:length], author[:length]
