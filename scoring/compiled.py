@@ -71,6 +71,7 @@ _SIGNATURES: Final[dict[str, tuple[Any, tuple[Any, ...]]]] = {
     "gather_reset": (None, (_ANY,)),
     "gather_add": (c_int, (_ANY, POINTER(Rule), _INT, _ANY, _ANY, _ANY, _ANY, _NUMBER)),
     "gather_insert": (c_int, (_ANY, _INT, _ANY)),
+    "gather_turn": (c_int, (_ANY, _INT, _ANY)),
     "gather_counts": (None, (_ANY, _ANY)),
     "gather_candidates": (_INT, (_ANY, _ANY, _ANY, _ANY, _ANY)),
     "choose_bounds": (

@@ -143,6 +143,13 @@ class Gathering:
         """Make posts candidates that no edge of the circle has brought; shape (n,), hashes."""
         check(passes.gather_insert(self._handle, len(posts), hashes(posts)))
 
+    def turn(self, posts: NDArray[np.uint64]) -> None:
+        """Turn to posts from beyond the ties: these, shape (n,), hashes, and all that the circle has edges on.
+
+        What were candidates are none any more, also where they are among these. `bound` comes next.
+        """
+        check(passes.gather_turn(self._handle, len(posts), hashes(posts)))
+
     def counts(self) -> tuple[int, int, int]:
         """Return how many posts, edges and markers of erasures the rows held."""
         counts = (c_int64 * 3)()

@@ -25,7 +25,7 @@ __all__ = ["AffinityRule", "Policy", "PolicyError", "Problem", "parse_policy", "
 DEFAULT_CURVE = HalfLife(12 * 3_600_000.0)
 DEFAULT_GAINS: Mapping[str, float] = {"like": 0.1, "comment": 0.3, "share": 0.5, "hide": -1.0}
 
-_TABLES = ("name", "weights", "freshness", "affinity", "explore", "arrange", "seen")
+_TABLES = ("name", "weights", "freshness", "affinity", "explore", "arrange", "seen", "beyond")
 _AFFINITY = ("stranger", "follow", "friend", "ceiling", "half_life", "gain")
 _CURVES = {"half_life": ("half_life",), "power": ("scale", "exponent")}
 _AT_LINE = re.compile(r"\(at line (\d+), column \d+\)")
@@ -37,6 +37,7 @@ _ceiling = fields.number("the ceiling is above 0", above=0.0)
 _exponent = fields.number("an exponent is above 0", above=0.0)
 _temperature = fields.number("a temperature is 0 to 20", low=0.0, high=20.0)
 _author_gap = fields.whole("an author gap is a whole number from 0 to 50", low=0, high=50)
+_share = fields.number("a share is from 0 to 1", low=0.0, high=1.0)
 _seen_factor = fields.number("a factor is from 0 to 1", low=0.0, high=1.0)
 
 
@@ -78,6 +79,8 @@ class Policy:
         temperature: Scale of the randomness on the log score; 0 is none.
         author_gap: Posts between two by one author, 0 to 50.
         seen_factor: Factor on the score of a seen post, 0 to 1.
+        beyond_share: Share of a feed's places that go to posts from beyond the reader's ties, 0 to 1.
+        beyond_fill: Whether such posts also fill the places that ties leave empty.
     """
 
     name: str
@@ -87,6 +90,13 @@ class Policy:
     temperature: float = 0.0
     author_gap: int = 0
     seen_factor: float = 1.0
+    beyond_share: float = 0.0
+    beyond_fill: bool = False
+
+    @property
+    def goes_beyond(self) -> bool:
+        """Whether feeds may hold posts that no one followed or befriended has an edge on."""
+        return self.beyond_share > 0.0 or self.beyond_fill
 
     def knows(self, kind: str) -> bool:
         """Say whether the kind, or a stem of it, has a weight here, be it 0.0."""
@@ -132,6 +142,7 @@ class Policy:
             "explore": {"temperature": self.temperature},
             "arrange": {"author_gap": self.author_gap},
             "seen": {"factor": self.seen_factor},
+            "beyond": {"share": self.beyond_share, "fill": self.beyond_fill},
         }
 
 
@@ -181,9 +192,14 @@ def _read(reader: Reader, document: Mapping[str, object]) -> Policy:
     reader.only(document, (), _TABLES)
     if "name" not in document:
         reader.refuse(("name",), "is missing: every policy has a name")
-    explore, arrange, seen = (
-        _table(reader, document, key, allowed)
-        for key, allowed in (("explore", "temperature"), ("arrange", "author_gap"), ("seen", "factor"))
+    explore, arrange, seen, beyond = (
+        _table(reader, document, key, *allowed)
+        for key, *allowed in (
+            ("explore", "temperature"),
+            ("arrange", "author_gap"),
+            ("seen", "factor"),
+            ("beyond", "share", "fill"),
+        )
     )
     return Policy(
         name=reader.take(document, ("name",), fields.name, ""),
@@ -193,6 +209,8 @@ def _read(reader: Reader, document: Mapping[str, object]) -> Policy:
         temperature=reader.take(explore, ("explore", "temperature"), _temperature, 0.0),
         author_gap=reader.take(arrange, ("arrange", "author_gap"), _author_gap, 0),
         seen_factor=reader.take(seen, ("seen", "factor"), _seen_factor, 1.0),
+        beyond_share=reader.take(beyond, ("beyond", "share"), _share, 0.0),
+        beyond_fill=reader.take(beyond, ("beyond", "fill"), fields.switch, default=False),
     )
 
 

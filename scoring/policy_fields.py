@@ -102,6 +102,13 @@ def whole(allowed: str, *, low: int, high: int) -> Check[int]:
     return check
 
 
+def switch(value: object) -> bool:
+    """Check a true or false."""
+    if not isinstance(value, bool):
+        raise ValueError("it is true or false")  # noqa: TRY004  # a check has one way to refuse
+    return value
+
+
 def choice(*names: str) -> Check[str]:
     """Make a check for one of several names."""
 

@@ -276,6 +276,16 @@ class Oracle:
         }
         return self._ranked(sums)
 
+    def beyond(self, reader: str, t_ms: int) -> list[tuple[str, float]]:
+        """Return the posts for everyone that no tie of the reader has an edge on, by score."""
+        chosen = [
+            post
+            for post, held in self.posts.items()
+            if held.audience == "everyone" and self.visible(reader, post) and not self.hidden(reader, post)
+            if not self.eligible(reader, post)
+        ]
+        return self._ranked({post: self.score(reader, post, t_ms) for post in chosen})
+
     def _newest_first(self, post: str) -> tuple[int, bytes]:
         return -self.posts[post].created_ms, post.encode()
 

@@ -155,6 +155,18 @@ int gather_insert(Gathering *g, int64_t count, const uint64_t *posts) {
     return status;
 }
 
+/* Turn to posts from beyond the ties: what were candidates are none any more; all other posts with an edge of the circle
+ * are, and so are these. */
+int gather_turn(Gathering *g, int64_t count, const uint64_t *posts) {
+    for (int64_t i = 0; i < g->posts; i++)
+        g->cell[i].newest_ms = g->cell[i].newest_ms == -INFINITY ? 0.0 : NAN;
+    int status = gather_insert(g, count, posts);
+    for (int64_t i = 0; i < g->posts; i++)
+        if (isnan(g->cell[i].newest_ms))
+            g->cell[i].newest_ms = -INFINITY;
+    return status;
+}
+
 /* Copy out how many posts, edges and marker entries there are. */
 void gather_counts(const Gathering *g, int64_t *counts) {
     counts[0] = g->posts, counts[1] = g->edges, counts[2] = g->markers;

@@ -49,6 +49,8 @@ def _item(item: FeedItem, *, why: bool) -> dict[str, Any]:
         "posted_at": format_ms(item.posted_ms),
         "score": item.score,
     }
+    if item.source is not None:
+        document["source"] = item.source
     if why:
         document["why"] = None if item.why is None else _reason(item.why)
     return document

@@ -2,14 +2,13 @@
 
 import numpy as np
 
-from scoring.affinity import BLOCK, MUTE, Circle
-from scoring.edges import EDGE
+from scoring.affinity import Circle
 from scoring.gathering import Bounds, Gathering, Reader
+from service.feed.beyond import outsider
 from service.feed.board import CrowdBound
 from service.feed.deadline import Deadline
 from service.feed.policies import PolicyBook, PreparedPolicy
 from service.feed.ranker import Ranker
-from service.feed.readers import ReaderState, hash_number
 from service.feed.shortlist import Found, Shortlister
 from service.feed.types import FeedItem, PopularAnswer, PopularRequest
 from service.store.records import read_item
@@ -70,13 +69,12 @@ class Popular:
         )
 
     async def _reader(self, request: PopularRequest) -> Reader:
-        asked = (request.forms, request.topics)
         if request.reader is None:
             await self._ranker.reads.begin()
-            return Reader(0, _EMPTY, b"", *asked)
+            return Reader(0, _EMPTY, b"", request.forms, request.topics)
         readers, hash_of = self._ranker.readers, self._store.hasher.hash
         state = await readers.load(request.reader, hash_of(request.reader), profile=False)
-        return Reader(hash_number(state.hash), _kept_apart(state), _blocks(state), *asked)
+        return outsider(state, request.forms, request.topics)
 
     def _shortlister(
         self, prepared: PreparedPolicy, crowd: CrowdBound, reader: Reader, deadline: Deadline, t_ms: int
@@ -86,20 +84,6 @@ class Popular:
         nothing, never = np.empty(0, np.uint64), np.empty(0)
         gathering.bound(Bounds(crowd.others, crowd.post, crowd.bound, nothing, never))
         return Shortlister(self._ranker.reads, reader, gathering, deadline)
-
-
-def _kept_apart(state: ReaderState) -> Circle:
-    """Give those whom the reader muted or blocked, and nobody else: no audience but everyone opens to a follower."""
-    known = state.known
-    chosen = (known.relation == MUTE) | (known.relation == BLOCK)
-    return Circle(known.person[chosen], known.relation[chosen], np.zeros(int(chosen.sum())))
-
-
-def _blocks(state: ReaderState) -> bytes:
-    """Give the marks of those who block the reader."""
-    marks = np.frombuffer(state.marks, dtype=EDGE)
-    packed: bytes = marks[(marks["stamp"] & np.uint64(0xFFFF)) == BLOCK].tobytes()
-    return packed
 
 
 def _certain(found: list[Found], certain: int, k: int, crowd: CrowdBound, *, exhausted: bool) -> bool:

@@ -11,8 +11,10 @@ from scoring.affinity import Circle
 from scoring.arrange import keep_apart
 from scoring.compiled import UnknownCodeError
 from scoring.edges import erasures, join_rows
-from scoring.gathering import Bounds, Gathering, Reader
+from scoring.gathering import Bounds, Gathering
 from scoring.ranking import Ranking
+from service.feed.beyond import Places, outsider, reader_of, surely
+from service.feed.board import CrowdBound
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
 from service.feed.pages import CARRIED, CursorBook, Session, new_session
@@ -91,19 +93,26 @@ class Ranker:
         profile = session.order == "ranked"
         view, gathering = await self.view(request.reader, session.policy, session.as_of_ms, deadline, profile=profile)
         before, again = served[: session.offset], served[session.offset : session.offset + request.k]
-        await self._bound(session, view, gathering, now_ms)
-        if again:
-            gathering.only(again)
-        elif before:
-            gathering.without(before)
-        if profile and len(hidden := view.reader.hidden(view.ranking)):
-            gathering.without([hidden.tobytes()])
-        reader = Reader(hash_number(view.reader.hash), view.circle, view.reader.marks, request.forms, request.topics)
-        shortlister = Shortlister(self.reads, reader, gathering, deadline)
+        crowd = await self._bound(session, view, gathering, now_ms)
+        self._narrow(view, gathering, before, again, profile=profile)
+        shortlister = Shortlister(self.reads, reader_of(view.reader, view.circle, request), gathering, deadline)
         chosen, certain, more = await self._choose(request, session, view.ranking, shortlister, before)
+        brought = None
+        if crowd is not None and view.ranking.policy.goes_beyond:
+            brought = {one.hash for one in chosen}
+            beyond, surely_beyond, more_beyond = await self._beyond(
+                request, session, view, gathering, before, again, deadline, len(chosen), crowd
+            )
+            places = Places(view.ranking.policy, session.offset, request.k)
+            kept = [*chosen, *beyond] if again else places.mixed(chosen, beyond)
+            certain = certain and surely_beyond
+            more = (more or more_beyond or len(kept) < len(chosen) + len(beyond)) and not (
+                certain and len(kept) < request.k
+            )
+            chosen = kept
         if again:
-            places = {post: place for place, post in enumerate(again)}
-            chosen.sort(key=lambda one: places[one.hash])
+            order = {post: place for place, post in enumerate(again)}
+            chosen.sort(key=lambda one: order[one.hash])
             more = True
         deadline.stage("shortlist")
         page = again or [one.hash for one in chosen]
@@ -113,10 +122,48 @@ class Ranker:
             as_of_ms=session.as_of_ms,
             policy=session.policy,
             complete=certain and view.whole,
-            items=await self._items(request, session, view, chosen),
+            items=await self._items(request, session, view, chosen, brought),
             next=cursor,
             stages_ms=deadline.stages_ms,
         )
+
+    def _narrow(
+        self, view: View, gathering: Gathering, before: list[bytes], again: list[bytes], *, profile: bool
+    ) -> None:
+        """Leave out what the pages before have served, and what is hidden; of a page again, all but its own."""
+        if again:
+            gathering.only(again)
+        elif before:
+            gathering.without(before)
+        if profile and len(hidden := view.reader.hidden(view.ranking)):
+            gathering.without([hidden.tobytes()])
+
+    async def _beyond(
+        self,
+        request: FeedRequest,
+        session: Session,
+        view: View,
+        gathering: Gathering,
+        before: list[bytes],
+        again: list[bytes],
+        deadline: Deadline,
+        ties: int,
+        crowd: CrowdBound,
+    ) -> tuple[list[Found], bool, bool]:
+        """Find posts from beyond the ties; say whether they are certain, and whether more may follow."""
+        places = Places(view.ranking.policy, session.offset, request.k)
+        need = request.k if again else places.wanted(ties)
+        if not need:
+            return [], True, True  # nobody has looked: the next page may turn out empty
+        gathering.turn(np.concatenate((crowd.post, np.frombuffer(b"".join(again), dtype="<u8"))))
+        self._set_bounds(session, view, gathering, crowd)
+        self._narrow(view, gathering, before, again, profile=True)
+        reader = outsider(view.reader, request.forms, request.topics)
+        shortlist = await Shortlister(self.reads, reader, gathering, deadline).best(need)
+        policy = view.ranking.policy
+        temperature = policy.temperature if session.explore else 0.0
+        certain = bool(again) or surely(shortlist, need, policy.affinity.crowd * crowd.others, temperature)
+        return shortlist.found, certain, shortlist.more
 
     async def view(
         self, reader: str, policy: str, t_ms: int, deadline: Deadline, *, profile: bool
@@ -170,12 +217,16 @@ class Ranker:
         as_of_ms = now_ms if request.as_of_ms is None else max(request.as_of_ms, now_ms)
         return new_session(request, as_of_ms, request.policy or self._policies.default), []
 
-    async def _bound(self, session: Session, view: View, gathering: Gathering, now_ms: int) -> None:
-        """Bound what the candidates stand in order by."""
+    async def _bound(self, session: Session, view: View, gathering: Gathering, now_ms: int) -> CrowdBound | None:
+        """Bound what the candidates stand in order by; newest first knows no crowd."""
         if session.order == "newest":
             gathering.by_newest()
-            return
+            return None
         crowd = await self.reads.crowd(view.prepared.board, session.as_of_ms, now_ms)
+        self._set_bounds(session, view, gathering, crowd)
+        return crowd
+
+    def _set_bounds(self, session: Session, view: View, gathering: Gathering, crowd: CrowdBound) -> None:
         policy = view.ranking.policy
         gathering.bound(
             Bounds(
@@ -213,8 +264,13 @@ class Ranker:
         chosen = shortlist.found[: request.k] if picked is None else picked
         return chosen, picked is not None, not shortlist.exhausted or shortlist.total > len(chosen)
 
-    async def _items(self, request: FeedRequest, session: Session, view: View, chosen: list[Found]) -> list[FeedItem]:
+    async def _items(
+        self, request: FeedRequest, session: Session, view: View, chosen: list[Found], brought: set[bytes] | None
+    ) -> list[FeedItem]:
         items = [_item(one, session) for one in chosen]
+        if brought is not None:
+            for item, one in zip(items, chosen, strict=True):
+                item.source = "tie" if one.hash in brought else "beyond"
         if request.why and items:
             posts, kinds = [one.hash for one in chosen], self._store.kinds.names
             found = await reasons(view, posts, kinds, self._store.connection, session.as_of_ms)

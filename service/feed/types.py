@@ -4,6 +4,7 @@ from dataclasses import dataclass, field
 from typing import Any, Literal
 
 Order = Literal["ranked", "newest"]
+Source = Literal["tie", "beyond"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,7 +43,8 @@ class FeedRequest:
 class FeedItem:
     """One post of a feed; `score` is None where the order is newest first.
 
-    Not frozen: that would double what making one costs.
+    `source` tells, where the policy goes beyond the ties, whether a tie brought the post. Not frozen: that would double
+    what making one costs.
     """
 
     post: str
@@ -51,6 +53,7 @@ class FeedItem:
     posted_ms: int
     score: float | None
     why: "Reason | None" = None
+    source: Source | None = None
 
 
 @dataclass(frozen=True, slots=True)

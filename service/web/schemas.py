@@ -49,6 +49,9 @@ class Post(Answer):
     form: str
     posted_at: Time
     score: float | None = Field(description="null where the order is newest")
+    source: Literal["tie", "beyond"] | None = Field(
+        None, description="only where the policy goes beyond the ties: whether a tie brought the post"
+    )
     why: Why | None = Field(None, description="only with why=1; null where only strangers brought the post")
 
 
