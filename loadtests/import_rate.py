@@ -104,6 +104,7 @@ def measure(path: Path) -> dict[str, Any]:
     ):
         client.config_set("appendonly", "no")
         before: Any = client.info("cpu")
+        begun_s = time.perf_counter()
         with Peak(int(client.info("server")["process_id"])) as peak:  # type: ignore[index]  # no awaitable here
             sys.argv = ["waxwane", "import", "--store", server.url, str(path)]
             try:
@@ -111,10 +112,16 @@ def measure(path: Path) -> dict[str, Any]:
             except SystemExit as ending:
                 if ending.code:
                     raise
+        taken_s = time.perf_counter() - begun_s
         after: Any = client.info("cpu")
         used_s = sum(after[name] - before[name] for name in ("used_cpu_user", "used_cpu_sys"))
         memory: Any = client.info("memory")
-    return {"server_cpu_s": used_s, "peak_mib": peak.mib, "server_mib": memory["used_memory"] / (1 << 20)}
+    return {
+        "seconds": taken_s,
+        "server_cpu_s": used_s,
+        "peak_mib": peak.mib,
+        "server_mib": memory["used_memory"] / (1 << 20),
+    }
 
 
 def main() -> None:
@@ -122,11 +129,16 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--events", type=int, default=1_000_000)
     parser.add_argument("--seed", type=int, default=1)
+    parser.add_argument("--json", action="store_true", help="print the figures as JSON, on the last line")
     asked = parser.parse_args()
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "events.ndjson"
         write_events(path, asked.events, asked.seed)
         found = measure(path)
+    if asked.json:
+        rate = {"events": asked.events, "events_per_s": asked.events / found["seconds"]}
+        sys.stdout.write(orjson.dumps(rate | found).decode() + "\n")
+        return
     sys.stdout.write(f"{found['server_cpu_s'] / asked.events * 1e6:.1f} µs of the server's processor an event\n")
     sys.stdout.write(f"{found['peak_mib']:,.0f} MiB at most, {found['server_mib']:,.0f} MiB in the server\n")
 

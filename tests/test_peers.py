@@ -57,6 +57,7 @@ def test_answers_that_differ_are_noticed() -> None:
     assert not close_enough(top, [("a", 3.0 + 1e-8), ("b", 2.0), ("c", 2.0)])
     assert not close_enough(top, [("b", 3.0), ("a", 2.0), ("c", 2.0)])
     assert not close_enough(top, top[:2])
+    assert not close_enough(top, [("a", 3.0), ("b", 2.0), ("b", 2.0)])
 
 
 def test_the_columns_hold_the_world() -> None:

@@ -1,9 +1,7 @@
 """How things grow: reads by ties and by edges a tie, ingest by batch, import by file, memory by key."""
 
 import asyncio
-import contextlib
 import json
-import resource
 import statistics
 import subprocess
 import sys
@@ -107,33 +105,11 @@ def single_event(count: int) -> dict[str, float]:
 
 
 def imported(count: int) -> dict[str, float]:
-    """Import a generated file of so many events; events a second and the command's peak memory."""
-    with tempfile.TemporaryDirectory() as folder:
-        file = Path(folder) / "events.ndjson"
-        _write_file(file, count)
-        program = [sys.executable, "-c", "from service.cli.main import main; main()"]
-        command = [*program, "import", "--json", "--data", f"{folder}/data", str(file)]
-        done = subprocess.run(command, check=True, capture_output=True)
-        peak_kib = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss
-    summary: dict[str, Any] = json.loads(done.stdout)
-    return {"events": summary["applied"], "events_per_s": summary["events_per_s"], "peak_mib": peak_kib / 1024}
-
-
-def _write_file(file: Path, count: int) -> None:
-    """Write worlds of other people one after the other until there are enough events."""
-    now_ms, written, world = time.time_ns() // 1_000_000, 0, 0
-    with file.open("w", encoding="utf-8") as out:
-        while written < count:
-            for event in events(Shape(strangers=2_000, seed=world), now_ms):
-                renamed = {name: f"{value}~{world}" if name in _NAMES else value for name, value in event.items()}
-                out.write(json.dumps(renamed, separators=(",", ":")) + "\n")
-                written += 1
-                if written == count:
-                    break
-            world += 1
-
-
-_NAMES = frozenset({"id", "actor", "post", "target"})
+    """Import a generated file of so many interactions, in a process of its own: see `loadtests.import_rate`."""
+    command = [sys.executable, "-m", "loadtests.import_rate", "--json", "--events", str(count)]
+    done = subprocess.run(command, check=True, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL)
+    figures: dict[str, float] = json.loads(done.stdout.splitlines()[-1])
+    return figures
 
 
 async def memory(shape: Shape) -> dict[str, Any]:
@@ -155,14 +131,15 @@ async def memory(shape: Shape) -> dict[str, Any]:
             counts[name] += 1
         client.close()
     edges = sum(1 for event in events(shape, now_ms) if event["type"] in ("post", "interaction"))
-    people = counts["row"]
+    people, of_rows = counts["row"], sum(by_name[name] for name in ("row", "ids", "who"))
     return {
         "edges": edges,
         "posts": counts["post"],
         "people": people,
         "used": used,
         "by_key": dict(sorted(by_name.items(), key=lambda item: -item[1])),
-        "bytes_per_edge": (by_name["row"] + by_name["ids"] + by_name["who"]) / edges,
+        "bytes_per_edge": (used - by_name["post"]) / edges,
+        "bytes_per_edge_of_rows": of_rows / edges,
         "bytes_per_post": by_name["post"] / counts["post"],
         "bytes_per_person_beside": sum(by_name[name] for name in ("name", "heard", "posts", "tie", "out", "in"))
         / people,
@@ -172,8 +149,4 @@ async def memory(shape: Shape) -> dict[str, Any]:
 def all_reads(count: int) -> list[dict[str, float]]:
     """Time reads of every size."""
     sizes = [(ties, 60) for ties in TIES] + [(300, edges) for edges in EDGES]
-    rows = []
-    for ties, edges in sizes:
-        with contextlib.suppress(KeyboardInterrupt):
-            rows.append(asyncio.run(reads(ties, edges, count)))
-    return rows
+    return [asyncio.run(reads(ties, edges, count)) for ties, edges in sizes]

@@ -1,6 +1,7 @@
 """PostgreSQL as a way of ranking: started from the installed programs, everything cached, one SELECT a read."""
 
 import glob
+import importlib.util
 import os
 import pwd
 import shutil
@@ -50,7 +51,7 @@ def _as_other_user() -> dict[str, int]:
 def server() -> Iterator[str | None]:
     """Run a server on a unix socket in a folder of its own; gives how to reach it, None where there are no programs."""
     folder = programs()
-    if folder is None:
+    if folder is None or importlib.util.find_spec("psycopg") is None:
         yield None
         return
     user = _as_other_user()

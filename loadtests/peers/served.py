@@ -102,13 +102,16 @@ class Client:
         return data
 
 
-def read_feeds(served: Served, reader: str, reads: int) -> dict[str, float]:
-    """Read a feed again and again; returns times in microseconds."""
+def read_feeds(served: Served, reader: str, expected: list[tuple[str, float]], reads: int) -> dict[str, float]:
+    """Read a feed of 20 posts again and again; returns times in microseconds.
+
+    The time moves on meanwhile, so of the first answer the posts are compared, not the scores.
+    """
     client, path = Client(served.port), f"/v1/feeds/{reader}?k=20&budget_ms=1000"
     for _ in range(reads // 5):
         page = json.loads(client.get(path))
-        if not page["complete"]:
-            raise SystemExit("a feed over HTTP is not complete")
+        if not page["complete"] or [item["post"] for item in page["items"]] != [post for post, _ in expected[:20]]:
+            raise SystemExit("a feed over HTTP is not complete, or not what the other ways gave")
     cpu_s, times = served.cpu_s(), []
     for _ in range(reads):
         begun_s = time.perf_counter()

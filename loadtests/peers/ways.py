@@ -27,7 +27,7 @@ class Way:
 
     name: str
     read: Callable[[], object]
-    top: Callable[[], Top] | None = None
+    top: Callable[[], Top]
     close: Callable[[], None] = lambda: None
 
 
@@ -53,17 +53,28 @@ class Socket:
         self._socket.close()
 
 
-def floor(path: str, standing: Standing, ranking: Ranking, t_ms: int) -> Way:
+def floor(path: str, standing: Standing, ranking: Ranking, world: Columns, hash_of: Callable[[str], bytes]) -> Way:
     """MGET of the same rows on a bare socket, then one compiled pass: what no read can be faster than."""
     line, packed = Socket(path), pack_mget(keys.keys("row", standing.people))
 
-    def read() -> object:
+    def read() -> Gathering:
         rows = line.ask(packed)
-        gathering = Gathering(ranking, t_ms)
+        gathering = Gathering(ranking, world.t_ms)
         gathering.add([row or b"" for row in rows], standing.affinity, standing.relation)  # type: ignore[attr-defined]
-        return gathering.counts()
+        return gathering
 
-    return Way("floor", read, close=line.close)
+    def top() -> Top:
+        """Add the crowd, which is not timed, so that the sums of the pass can be compared."""
+        found, crowd = read().candidates(), dict(zip(map(hash_of, world.posts), world.crowd().tolist(), strict=True))
+        names = {hash_of(name): name for name in world.posts}
+        rows = zip(found.post.tolist(), found.known.tolist(), found.share.tolist(), strict=True)
+        scores = []
+        for post, known, share in rows:
+            packed_hash = post.to_bytes(8, "little")
+            scores.append((names[packed_hash], known + world.stranger * (crowd[packed_hash] - share)))
+        return sorted(scores, key=lambda one: -one[1])[:TOP]
+
+    return Way("floor", read, top, line.close)
 
 
 def redis_alone(path: str, world: Columns) -> Way:
