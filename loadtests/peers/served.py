@@ -69,37 +69,43 @@ class Client:
         self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
 
     def get(self, path: str) -> bytes:
-        """Send a GET and return the body of its answer."""
-        return self._ask(f"GET {path} HTTP/1.1\r\nHost: localhost\r\n\r\n".encode())
+        """Send a GET and return the body of its answer, which must be 200."""
+        return _good(*self.ask("GET", path))
 
-    def post(self, path: str, body: bytes, media_type: str = "application/json") -> bytes:
-        """Send a POST and return the body of its answer."""
-        head = f"POST {path} HTTP/1.1\r\nHost: localhost\r\nContent-Type: {media_type}\r\n"
-        return self._ask(f"{head}Content-Length: {len(body)}\r\n\r\n".encode() + body)
+    def post(self, path: str, body: bytes, media_type: str = "application/json", *, check: bool = True) -> bytes:
+        """Send a POST and return the body of its answer, which must be 200 where it is checked."""
+        status, answer = self.ask("POST", path, body, media_type)
+        return _good(status, answer) if check else answer
 
     def close(self) -> None:
         """Hang up."""
         self._socket.close()
 
-    def _ask(self, request: bytes) -> bytes:
-        self._socket.sendall(request)
+    def ask(self, method: str, path: str, body: bytes = b"", media_type: str = "") -> tuple[int, bytes]:
+        """Send a request and return its answer: status and body."""
+        fields = f"Content-Type: {media_type}\r\nContent-Length: {len(body)}\r\n" if body else ""
+        self._socket.sendall(f"{method} {path} HTTP/1.1\r\nHost: localhost\r\n{fields}\r\n".encode() + body)
         answer = b""
         while b"\r\n\r\n" not in answer:
             answer += self._received()
-        head, _, body = answer.partition(b"\r\n\r\n")
-        status, *fields = head.lower().split(b"\r\n")
-        length = next(int(field[16:]) for field in fields if field.startswith(b"content-length:"))
-        while len(body) < length:
-            body += self._received()
-        if b" 200 " not in status:
-            raise SystemExit(f"{status.decode()}: {body[:300].decode(errors='replace')}")
-        return body
+        head, _, found = answer.partition(b"\r\n\r\n")
+        status, *lines = head.lower().split(b"\r\n")
+        length = next(int(line[16:]) for line in lines if line.startswith(b"content-length:"))
+        while len(found) < length:
+            found += self._received()
+        return int(status.split(b" ")[1]), found
 
     def _received(self) -> bytes:
         data = self._socket.recv(1 << 16)
         if not data:
             raise SystemExit("the service hung up")
         return data
+
+
+def _good(status: int, body: bytes) -> bytes:
+    if status != 200:
+        raise SystemExit(f"{status}: {body[:300].decode(errors='replace')}")
+    return body
 
 
 def read_feeds(served: Served, reader: str, expected: list[tuple[str, float]], reads: int) -> dict[str, float]:
