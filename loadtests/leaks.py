@@ -1,10 +1,10 @@
 """Is anybody shown what they may not see? `python -m loadtests.leaks` reads 100,000 times and looks at every post.
 
-Random worlds full of blocks, mutes, audiences, withdrawals and erasures (`tests/worlds.py`) are sent, a batch at a time,
-to a service with four workers on an embedded store. After each answer, readers read at once, over several connections
-and so from every worker: ranked feeds that go beyond ties, newest first, by topic, what is popular, pages of cursors
-that are older than the last events, and explanations. What each may see is computed by brute force (`tests/oracle.py`)
-from the events answered so far. One post shown wrongly ends the run with status 1.
+Random worlds full of blocks, mutes, audiences, withdrawals and erasures (`tests/worlds.py`) are sent, a batch at a
+time, to a service with four workers on an embedded store. After each answer, readers read at once, over several
+connections and so from every worker: ranked feeds that go beyond ties, newest first, by topic, what is popular, pages
+of cursors that are older than the last events, and explanations. What each may see is computed by brute force
+(`tests/oracle.py`) from the events answered so far. One post shown wrongly ends the run with status 1.
 """
 
 import argparse
