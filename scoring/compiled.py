@@ -82,6 +82,7 @@ _SIGNATURES: Final[dict[str, tuple[Any, tuple[Any, ...]]]] = {
     "choose_without": (None, (_ANY, _INT, _ANY)),
     "choose_only": (c_int, (_ANY, _INT, _ANY)),
     "choose_take": (_INT, (_ANY, _INT, _ANY)),
+    "choose_unseen": (_NUMBER, (_ANY, _NUMBER, _NUMBER)),
     "choose_next_bound": (_NUMBER, (_ANY,)),
     "judge": (c_int, (_ANY, POINTER(Rule), POINTER(Who), _INT, _ANY, _ANY, _ANY, _NUMBER)),
     "judge_rank": (None, (_ANY, c_int)),

@@ -209,6 +209,15 @@ class Gathering:
         """Return the greatest bound that is left, -1.0 where nothing is."""
         return float(passes.choose_next_bound(self._handle))
 
+    def unseen(self, greatest: float, temperature: float) -> float:
+        """Bound the summed weight, (score / greatest)^(1 / temperature), of the candidates that were not taken.
+
+        Args:
+            greatest: The greatest score found, above 0.
+            temperature: Of the randomness, above 0.
+        """
+        return float(passes.choose_unseen(self._handle, greatest, 1.0 / temperature))
+
     def judge(self, posts: Sequence[bytes], values: Sequence[bytes], reader: Reader) -> None:
         """Compute the scores of posts that were looked up, and leave out what the reader may not see.
 

@@ -11,6 +11,7 @@ from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
 from service.feed.explain import Explainer
 from service.feed.export import Exporter
+from service.feed.exposure import ExposureLog
 from service.feed.policies import PolicyBook
 from service.feed.popular import Popular
 from service.feed.ranker import Ranker
@@ -41,6 +42,7 @@ class Engine:
         policies: texts of policy files; the first is the default.
         budget_ms: time that a ranking may take where a request says nothing, milliseconds.
         default_policy: name of the default policy where it is not the first.
+        log_exposures: keep what feeds have shown, and with what chance, in the store.
         cache_bytes: most memory for rows remembered between reads, and about as much for posts, bytes.
 
     Raises:
@@ -56,6 +58,7 @@ class Engine:
         budget_ms: float = 50.0,
         default_policy: str | None = None,
         cache_bytes: int = 64 << 20,
+        log_exposures: bool = False,
     ) -> None:
         slots = board_slots(len(options.bank.half_lives_ms))
         self._policies = PolicyBook(options.bank, slots, options.retention_ms)
@@ -66,6 +69,7 @@ class Engine:
         self._policies.prepared(None, [])
         self.store = Store(options, known=self._policies.knows, known_kinds=self._policies.known_kinds)
         self._budget_ms = budget_ms
+        self._log_exposures = log_exposures
         self._cache = WorkerCache(row_bytes=cache_bytes, post_bytes=cache_bytes)
         self._watcher = Periodic("policies", self._load_policies, _POLICIES_EVERY_S, at_once=False)
 
@@ -95,6 +99,7 @@ class Engine:
             budget_ms=settings.budget_ms,
             default_policy=settings.default_policy,
             cache_bytes=settings.cache_mb << 20,
+            log_exposures=settings.exposure == "log",
         )
 
     async def start(self, *, background: bool = True) -> None:
@@ -108,7 +113,9 @@ class Engine:
 
         """
         await self.store.start(sweep=background)
-        self._ranker = Ranker(self.store, self._policies, self._cache, self._budget_ms)
+        self._exposures = ExposureLog(self.store)
+        logged = self._exposures if self._log_exposures else None
+        self._ranker = Ranker(self.store, self._policies, self._cache, self._budget_ms, logged)
         self._explainer = Explainer(self.store, self._policies, self._ranker)
         self._popular = Popular(self.store, self._policies, self._ranker)
         self._exporter = Exporter(self.store)
@@ -133,6 +140,10 @@ class Engine:
         """Rank what counts most for everybody; see `service.feed.popular.Popular.popular`."""
         deadline = Deadline(self._budget_ms, time.perf_counter() if arrived_s is None else arrived_s)
         return await self._popular.popular(request, now_ms, deadline)
+
+    async def exposures(self, after: str, count: int) -> list[dict[str, Any]]:
+        """Give what feeds have shown; see `service.feed.exposure.ExposureLog.read`."""
+        return await self._exposures.read(after, count)
 
     async def explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         """Take a score apart; see `service.feed.explain.Explainer.explain`."""

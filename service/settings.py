@@ -95,6 +95,9 @@ class Settings(BaseSettings):
     default_policy: Annotated[str, Field(min_length=1)] | None = _setting(
         None, "policy of a reader without one; not set: the first that is loaded", "the name of a loaded policy"
     )
+    exposure: Annotated[Literal["off", "log"], BeforeValidator(_lower)] = _setting(
+        "off", "whether what feeds have shown, and with what chance, is logged", "off or log"
+    )
     budget_ms: Annotated[float, Field(gt=0, le=60_000, allow_inf_nan=False)] = _setting(
         50.0, "time that ranking a feed may take", "milliseconds above 0, up to 60000"
     )

@@ -73,6 +73,11 @@ class FakeEngine:
         items = [FeedItem(post.post, post.actor, post.form, post.at, 3.0) for post in posts[: request.k]]
         return PopularAnswer(request.as_of_ms or now_ms, "allotments", True, items, {"reader": 0.25})
 
+    async def exposures(self, after: str, count: int) -> list[dict[str, Any]]:
+        """Give one entry."""
+        self._ask((after, count), 0, 0.0)
+        return [{"id": "1-1", "reader": "joel"}]
+
     async def explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         """Give the same parts for every post."""
         self._ask(request, now_ms, 0.0)

@@ -14,7 +14,7 @@ from redis.crc import key_slot
 from service.engine import Engine
 from service.feed.types import FeedRequest
 from service.store import keys, scripts
-from service.store.calls import Call, trim_board
+from service.store.calls import Call, log_exposure, trim_board
 from service.store.connection import Connection
 from service.store.ids import bucket
 from tests.bulk_loads import import_apart
@@ -81,6 +81,7 @@ async def fill(engine: Engine, world: World) -> None:
         page = await engine.feed(FeedRequest(reader, k=1), world.now_ms)
         while page.next:
             page = await engine.feed(FeedRequest(reader, k=1, cursor=page.next), world.now_ms)
+    await engine.store.run([log_exposure(bytes(8), b"{}")])
     await engine.store.run([trim_board(slot, 2) for slot in engine.store.board_slots])
 
 
@@ -96,7 +97,9 @@ def check_key(name: bytes, kind: str, life_ms: int, listed: dict[str, Listed]) -
 
 def test_the_table_lists_every_builder() -> None:
     """The table has a row for each name that keys.py builds, and for nothing else."""
-    single = {"seq", "outbox", "applied", "board", "floor", "changes", "changed", "kinds", "meta", "policies"}
+    single = {"seq", "outbox", "applied", "board", "floor", "changes", "changed", "kinds", "meta", "policies"} | {
+        "exposures"
+    }
     assert set(table()) == set(keys._PREFIX) | single
 
 

@@ -14,6 +14,7 @@ __all__ = ["client", "engine"]
 
 V1 = [
     "/v1/events",
+    "/v1/exposures",
     "/v1/feeds/{reader}",
     "/v1/feeds/{reader}/posts/{post}",
     "/v1/people/{person}",

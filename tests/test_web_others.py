@@ -28,6 +28,16 @@ def test_a_person_is_exported(client: TestClient) -> None:
     assert client.get("/v1/people/mina").json() == {"person": "mina", "events": ["e1", "e5"]}
 
 
+def test_exposures_are_lines(client: TestClient, engine: FakeEngine) -> None:
+    """What was shown is newline-delimited JSON; where to go on and how much are checked."""
+    answer = client.get("/v1/exposures?after=5-1&count=7")
+    assert answer.headers["content-type"].startswith("application/x-ndjson")
+    assert answer.text == '{"id":"1-1","reader":"joel"}\n'
+    assert engine.asked[-1][0] == ("5-1", 7)
+    for query, field in (("after=x", "after"), ("count=1001", "count"), ("k=1", "k")):
+        assert is_problem(client.get(f"/v1/exposures?{query}"), 422)["errors"][0]["field"] == field
+
+
 def test_a_person_with_a_slash(client: TestClient) -> None:
     """A person's id is percent-encoded too."""
     assert client.get("/v1/people/a%2Fb").json() == {"person": "a/b", "events": []}

@@ -186,6 +186,16 @@ int64_t choose_take(Gathering *g, int64_t count, uint64_t *posts) {
     return n;
 }
 
+/* The summed weight, (bound without noise / greatest)^power, of the candidates that have not been taken. */
+double choose_unseen(const Gathering *g, double greatest, double power) {
+    int64_t last = g->taken ? g->front[g->taken - 1] : -1;
+    double sum = 0.0;
+    for (int64_t i = 0; i < g->posts; i++)
+        if (g->bound[i] != NONE_LEFT && (last < 0 || before(g, last, i)))
+            sum += pow(g->bound[i] / g->noise[i] / greatest, power);
+    return sum;
+}
+
 /* The greatest bound that is left, -1 where nothing is. */
 double choose_next_bound(Gathering *g) {
     reach(g, g->taken + 1);

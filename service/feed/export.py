@@ -5,6 +5,7 @@ from typing import Any
 import numpy as np
 
 from scoring.edges import EDGE, MARKER, RETRACTED, codes, times_ms
+from service.feed.exposure import ExposureLog
 from service.store import keys
 from service.store.drive import RELATIONS
 from service.store.pieces import unstamp
@@ -52,6 +53,7 @@ class Exporter:
             "tied_by": await self._relations(_pairs(tied_by), "actor"),
             "seen": await self._seen(seen or b""),
             "retracts": len(undo or b"") // EDGE.itemsize,
+            "exposures": await ExposureLog(self._store).of_person(id_hash) if name is not None else [],
         }
 
     async def _edges(self, row: bytes, who: bytes) -> list[dict[str, Any]]:

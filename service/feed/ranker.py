@@ -17,6 +17,7 @@ from service.feed.beyond import Places, outsider, reader_of, surely
 from service.feed.board import CrowdBound
 from service.feed.cache import WorkerCache
 from service.feed.deadline import Deadline
+from service.feed.exposure import ExposureLog, Pool
 from service.feed.pages import CARRIED, CursorBook, Session, new_session
 from service.feed.policies import PolicyBook
 from service.feed.readers import Readers, ReaderState, Standing, hash_number
@@ -49,10 +50,19 @@ class Ranker:
         policies: the loaded policies.
         cache: what this worker remembers between reads.
         budget_ms: time that a ranking may take where the request says nothing, milliseconds.
+        exposures: logs what is shown; None where it is not logged.
 
     """
 
-    def __init__(self, store: Store, policies: PolicyBook, cache: WorkerCache, budget_ms: float) -> None:
+    def __init__(
+        self,
+        store: Store,
+        policies: PolicyBook,
+        cache: WorkerCache,
+        budget_ms: float,
+        exposures: ExposureLog | None = None,
+    ) -> None:
+        self._exposures = exposures
         self._store = store
         self._policies = policies
         self._budget_ms = budget_ms
@@ -97,6 +107,8 @@ class Ranker:
         self._narrow(view, gathering, before, again, profile=profile)
         shortlister = Shortlister(self.reads, reader_of(view.reader, view.circle, request), gathering, deadline)
         chosen, certain, more = await self._choose(request, session, view.ranking, shortlister, before)
+        temperature = view.ranking.policy.temperature if session.explore else 0.0
+        pools = {"tie": Pool.of(gathering, temperature)} if self._exposures and crowd is not None else {}
         brought = None
         if crowd is not None and view.ranking.policy.goes_beyond:
             brought = {one.hash for one in chosen}
@@ -106,6 +118,8 @@ class Ranker:
             places = Places(view.ranking.policy, session.offset, request.k)
             kept = [*chosen, *beyond] if again else places.mixed(chosen, beyond)
             certain = certain and surely_beyond
+            if pools and len(beyond):
+                pools["beyond"] = Pool.of(gathering, temperature)
             more = (more or more_beyond or len(kept) < len(chosen) + len(beyond)) and not (
                 certain and len(kept) < request.k
             )
@@ -117,7 +131,7 @@ class Ranker:
         deadline.stage("shortlist")
         page = again or [one.hash for one in chosen]
         cursor = await self._next(session, served, page, now_ms) if more else None
-        return FeedAnswer(
+        answer = FeedAnswer(
             reader=request.reader,
             as_of_ms=session.as_of_ms,
             policy=session.policy,
@@ -126,6 +140,10 @@ class Ranker:
             next=cursor,
             stages_ms=deadline.stages_ms,
         )
+        if self._exposures and pools:
+            await self._exposures.log(view.reader.hash, session, answer, pools, now_ms)
+            deadline.stage("exposure")
+        return answer
 
     def _narrow(
         self, view: View, gathering: Gathering, before: list[bytes], again: list[bytes], *, profile: bool

@@ -9,6 +9,9 @@ from service.store.scripts import Script, load
 
 Argument = bytes | str | int
 
+LOGGED_EXPOSURES = 10_000
+"""How many pages of feeds are kept in the log of exposures, about."""
+
 LOGGED_CHANGES = 10_000
 """How many entries of the change log are kept; a worker further behind begins anew."""
 
@@ -345,6 +348,22 @@ def log_changes(people: Iterable[bytes], posts: Iterable[bytes]) -> Call:
     """Note whose rows and which posts have changed."""
     blobs = [b"".join(sorted(hashes)) for hashes in (people, posts)]
     return Call(load("log_changes"), [keys.CHANGES, keys.CHANGED], [LOGGED_CHANGES, *blobs])
+
+
+def log_exposure(reader: bytes, exposure: bytes) -> Call:
+    """Note what a feed has shown to a reader."""
+    fields = (b"reader", reader, b"shown", exposure)
+    return Call(None, [], [b"XADD", keys.EXPOSURES, b"MAXLEN", b"~", LOGGED_EXPOSURES, b"*", *fields])
+
+
+def read_exposures(after: bytes, count: int) -> Call:
+    """Read what feeds have shown after an entry."""
+    return Call(None, [], [b"XRANGE", keys.EXPOSURES, b"(" + after, b"+", b"COUNT", count])
+
+
+def drop_exposures(entries: Sequence[bytes]) -> Call:
+    """Take entries out of what feeds have shown."""
+    return Call(None, [], [b"XDEL", keys.EXPOSURES, *entries])
 
 
 def trim_board(slot: int, posts: int) -> Call:

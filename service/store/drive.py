@@ -293,7 +293,20 @@ class Driver:
         seq, low, member = (await self._run([sweep]))[0]
         if seq:
             await self.drive([Entry.read(entry.bucket, low, member)], now_ms, refused)
+        await self._forget_exposures(person, until_ms)
         await self._run([calls.close_entry(entry.bucket, entry.seq)])
+
+    async def _forget_exposures(self, person: bytes, until_ms: int) -> None:
+        """Take what was shown to an erased person out of the log of exposures."""
+        after = b"0-0"
+        while True:
+            entries = (await self._run([calls.read_exposures(after, _EXPOSURES_AT_ONCE)]))[0]
+            gone = [number for number, fields in entries if fields[1] == person and _entry_ms(number) <= until_ms]
+            if gone:
+                await self._run([calls.drop_exposures(gone)])
+            if len(entries) < _EXPOSURES_AT_ONCE:
+                return
+            after = entries[-1][0]
 
     def _swept(self, entry: Entry, now_ms: int) -> tuple[Far, Then]:
         swept = Swept.read(entry.pieces[0].body)
@@ -340,6 +353,14 @@ class Driver:
             Edges(number, EdgeWork(effect, [(post, "", by_post[post]) for post in group])) for number, group in groups
         ]
         return far, [group for _, group in groups]
+
+
+_EXPOSURES_AT_ONCE = 500
+
+
+def _entry_ms(number: bytes) -> int:
+    """Read the time out of a stream entry's number."""
+    return int(number.partition(b"-")[0])
 
 
 Kind = TypeVar("Kind")

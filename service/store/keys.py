@@ -28,6 +28,7 @@ bucket, and on a cluster a bucket is one slot. `b` is the bucket, 0 to 127.
 | `floor:{s}` | string | the greatest value that was trimmed from the board | for good |
 | `changes:{log}` | stream | whose rows and which posts have changed, by number without gaps | the newest 10,000 |
 | `changed:{log}` | integer | the last number in the change log | for good |
+| `exposures:{log}` | stream | what feeds have shown to whom and with what chance, where the setting asks for it | the newest 10,000 |
 | `kinds` | hash | code of each kind | for good |
 | `meta` | hash | hash key, format and bank of the store | for good |
 | `policies` | hash | TOML of each pushed policy | for good |
@@ -44,6 +45,7 @@ _PACKED = {
 
 CHANGES = b"changes:{log}"
 CHANGED = b"changed:{log}"
+EXPOSURES = b"exposures:{log}"
 KINDS = b"kinds"
 META = b"meta"
 POLICIES = b"policies"

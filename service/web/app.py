@@ -9,6 +9,7 @@ from service.web import (
     openapi,
     problems,
     routes_events,
+    routes_exposures,
     routes_feeds,
     routes_health,
     routes_people,
@@ -36,7 +37,15 @@ def create_app(engine: FeedEngine | None = None, settings: WebSettings | None = 
     state = WebState(engine, settings or Limits())
     app = FastAPI(lifespan=_lifespan, docs_url=None, redoc_url=None, openapi_url=None, redirect_slashes=False)
     put_state(app, state)
-    for routes in (routes_events, routes_feeds, routes_popular, routes_people, routes_policies, routes_health):
+    for routes in (
+        routes_events,
+        routes_feeds,
+        routes_popular,
+        routes_exposures,
+        routes_people,
+        routes_policies,
+        routes_health,
+    ):
         app.include_router(routes.router)
     problems.install(app)
     openapi.install(app)

@@ -79,6 +79,15 @@ def answers(model: type[BaseModel], *statuses: int, headers: Schema | None = Non
     return described
 
 
+EXPOSURES_ANSWERS: Final[dict[int | str, Schema]] = {
+    200: {
+        "description": "Logged pages, one a line",
+        "content": {bodies.NDJSON: {"schema": {"type": "string"}, "example": examples.EXPOSURES}},
+    },
+    **{status: problem_answer(HTTPStatus(status).phrase) for status in (422, 429, 503)},
+}
+
+
 def events_body() -> Schema:
     """Describe the body of a call that sends events."""
     lines = "".join(orjson.dumps(event).decode() + "\n" for event in examples.EVENTS.values())

@@ -84,6 +84,12 @@ EXPLANATION: Final[dict[str, Any]] = {
     ],
 }
 
+EXPOSURES: Final = (
+    '{"id":"1777885200000-0","served_at":"2026-05-04T09:00:00.000Z","reader":"joel","session":"8f1d2a9b3c4e5f60",'
+    '"as_of":"2026-05-04T09:00:00.000Z","policy":"allotments","temperature":0.5,"complete":true,"slots":[{"place":1,'
+    '"post":"p1","score":5.25,"source":"tie","chance":0.42,"chance_at_least":0.4}]}\n'
+)
+
 POLICY_TOML: Final = """\
 name = "allotments"
 

@@ -16,6 +16,7 @@ SKEW_MS: Final = 60 * 1000
 K_MAX: Final = 200
 BUDGET_MAX_MS: Final = 10_000
 CURSOR_CHARS: Final = 1024
+EXPOSURES_MAX: Final = 1000
 
 
 def _digits(value: Any) -> Any:  # noqa: ANN401  a validator sees whatever was sent
@@ -53,6 +54,15 @@ class ExplainQuery(BaseModel):
 
     policy: Id | None = Field(None, description="name of a loaded policy; the reader's assigned one if left out")
     as_of: AsOf = Field(None, description="rank as at this time, from now to 30 days ahead")
+
+
+class ExposuresQuery(BaseModel):
+    """The parameters of what was shown."""
+
+    after: Annotated[str, Field(pattern=r"^[0-9]{1,15}-[0-9]{1,15}$")] = Field(
+        "0-0", description="`id` of the last entry that was read"
+    )
+    count: Annotated[int, Whole] = Field(100, ge=1, le=EXPOSURES_MAX, description="how many entries")
 
 
 class PopularQuery(ExplainQuery):

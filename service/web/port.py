@@ -38,6 +38,9 @@ class FeedEngine(Protocol):
     async def popular(self, request: PopularRequest, now_ms: int, arrived_s: float) -> PopularAnswer:
         """Rank what counts most for everybody."""
 
+    async def exposures(self, after: str, count: int) -> list[dict[str, Any]]:
+        """List what feeds have shown after an entry, oldest first."""
+
     async def explain(self, request: ExplainRequest, now_ms: int) -> Explanation:
         """Say why a post has its score; raise `NotFound` where the reader may not see it."""
 
