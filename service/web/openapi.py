@@ -19,6 +19,10 @@ Takes post and interaction events and ranks each reader's feed.
 
 Ids are 1 to 128 bytes of UTF-8 without control characters; in a path they are percent-encoded, a slash as
 `%2F`. Times are RFC 3339 with an offset, or Unix milliseconds. Every error is a problem document (RFC 9457).
+
+Ranking steers what people see. Weights on engagement favour whatever engages, harm among it; minors and people in a
+crisis need care that no formula gives. All events are personal data: who did what, when and to whom. What is allowed,
+and what must be told, offered or switched off, the law and the codes of the place decide.
 """
 
 
