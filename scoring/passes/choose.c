@@ -27,8 +27,8 @@ static double left_of_crowd(double crowd, double share) {
 static void set_bound(Gathering *g, int64_t place, double stranger, double crowd) {
     const Cell *cell = &g->cell[place];
     double most = stranger > 0.0 ? stranger * left_of_crowd(crowd, cell->share) : 0.0;
-    double factor = g->factor[place];
-    g->bound[place] = factor > 0.0 ? (cell->known + most) * g->noise[place] * factor : 0.0;
+    double factor = g->plain ? 1.0 : g->factor[place], noise = g->plain ? 1.0 : g->noise[place];
+    g->bound[place] = factor > 0.0 ? (cell->known + most) * noise * factor : 0.0;
 }
 
 static int make_bounds(Gathering *g) {
@@ -57,11 +57,12 @@ int choose_bounds(Gathering *g, double stranger, double others, int64_t listed, 
     if (make_bounds(g) != FINE)
         return NO_MEMORY;
     uint64_t seed_mixed = mix(seed);
-    for (int64_t i = 0; i < g->posts; i++) {
+    g->plain = temperature <= 0.0 && (factor == 1.0 || !seen);
+    for (int64_t i = 0; !g->plain && i < g->posts; i++) {
         g->factor[i] = 1.0;
         g->noise[i] = temperature > 0.0 ? multiplier(seed_mixed, g->cell[i].post, temperature) : 1.0;
     }
-    for (int64_t i = 0; factor != 1.0 && i < seen; i++) {
+    for (int64_t i = 0; !g->plain && factor != 1.0 && i < seen; i++) {
         int64_t place = place_of(g, seen_post[i]);
         if (place >= 0 && g->cell[place].newest_ms <= seen_ms[i])
             g->factor[place] = factor;
@@ -86,9 +87,8 @@ int choose_bounds(Gathering *g, double stranger, double others, int64_t listed, 
 int choose_newest(Gathering *g) {
     if (make_bounds(g) != FINE)
         return NO_MEMORY;
-    g->candidates = 0;
+    g->candidates = 0, g->plain = 1;
     for (int64_t i = 0; i < g->posts; i++) {
-        g->factor[i] = g->noise[i] = 1.0;
         int candidate = g->cell[i].newest_ms != -INFINITY;
         g->bound[i] = candidate ? g->cell[i].newest_ms : NONE_LEFT;
         g->candidates += candidate;
@@ -192,7 +192,7 @@ double choose_unseen(const Gathering *g, double greatest, double power) {
     double sum = 0.0;
     for (int64_t i = 0; i < g->posts; i++)
         if (g->bound[i] != NONE_LEFT && (last < 0 || before(g, last, i)))
-            sum += pow(g->bound[i] / g->noise[i] / greatest, power);
+            sum += pow(g->bound[i] / (g->plain ? 1.0 : g->noise[i]) / greatest, power);
     return sum;
 }
 

@@ -133,8 +133,8 @@ int judge(Gathering *g, const Rule *rule, const Who *who, int64_t count, const u
         Found *found = new_found(g);
         if (!found)
             return NO_MEMORY;
-        found->score = (cell->known + rule->stranger * left) * g->factor[place];
-        found->order = found->score * g->noise[place];
+        found->score = (cell->known + rule->stranger * left) * (g->plain ? 1.0 : g->factor[place]);
+        found->order = found->score * (g->plain ? 1.0 : g->noise[place]);
         found->key = tie_key(found->order);
         found->posted_ms = post.posted_ms;
         found->nth = nth;

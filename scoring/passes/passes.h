@@ -67,6 +67,7 @@ typedef struct {
     uint32_t *slot;
     int64_t edges, markers;
     double *bound, *factor, *noise;
+    int plain;                /* no factors and no noise: all are 1, and not written down */
     int64_t bound_room;
     int64_t *front;           /* candidates in falling order of bound */
     int64_t fronted, taken, candidates;

@@ -38,8 +38,8 @@ def create_app(engine: FeedEngine | None = None, settings: WebSettings | None = 
     app = FastAPI(lifespan=_lifespan, docs_url=None, redoc_url=None, openapi_url=None, redirect_slashes=False)
     put_state(app, state)
     for routes in (
-        routes_events,
         routes_feeds,
+        routes_events,
         routes_popular,
         routes_exposures,
         routes_people,
