@@ -11,8 +11,7 @@ from scoring.affinity import Circle
 from scoring.arrange import keep_apart
 from scoring.compiled import UnknownCodeError
 from scoring.edges import erasures, join_rows
-from scoring.gathering import Bounds, Gathering
-from scoring.ranking import Ranking
+from scoring.gathering import Gathering
 from service.feed.beyond import Places, outsider, reader_of, surely
 from service.feed.board import CrowdBound
 from service.feed.cache import WorkerCache
@@ -21,6 +20,7 @@ from service.feed.exposure import ExposureLog, Pool
 from service.feed.pages import CARRIED, CursorBook, Session, new_session
 from service.feed.policies import PolicyBook
 from service.feed.readers import Readers, ReaderState, Standing, hash_number
+from service.feed.reading import Chosen, Reading
 from service.feed.reads import Reads
 from service.feed.reasons import reasons
 from service.feed.shortlist import Found, Shortlist, Shortlister
@@ -103,85 +103,56 @@ class Ranker:
         profile = session.order == "ranked"
         view, gathering = await self.view(request.reader, session.policy, session.as_of_ms, deadline, profile=profile)
         before, again = served[: session.offset], served[session.offset : session.offset + request.k]
-        crowd = await self._bound(session, view, gathering, now_ms)
-        self._narrow(view, gathering, before, again, profile=profile)
-        shortlister = Shortlister(self.reads, reader_of(view.reader, view.circle, request), gathering, deadline)
-        chosen, certain, more = await self._choose(request, session, view.ranking, shortlister, before)
-        temperature = view.ranking.policy.temperature if session.explore else 0.0
-        pools = {"tie": Pool.of(gathering, temperature)} if self._exposures and crowd is not None else {}
-        brought = None
+        reading = Reading(request, session, view, gathering, deadline, before, again)
+        crowd = await self._bound(reading, now_ms)
+        reading.narrow()
+        chosen = await self._choose(reading)
         if crowd is not None and view.ranking.policy.goes_beyond:
-            brought = {one.hash for one in chosen}
-            beyond, surely_beyond, more_beyond = await self._beyond(
-                request, session, view, gathering, before, again, deadline, len(chosen), crowd
-            )
-            places = Places(view.ranking.policy, session.offset, request.k)
-            kept = [*chosen, *beyond] if again else places.mixed(chosen, beyond)
-            certain = certain and surely_beyond
-            if pools and len(beyond):
-                pools["beyond"] = Pool.of(gathering, temperature)
-            more = (more or more_beyond or len(kept) < len(chosen) + len(beyond)) and not (
-                certain and len(kept) < request.k
-            )
-            chosen = kept
+            chosen = await self._with_beyond(reading, chosen, crowd)
         if again:
-            order = {post: place for place, post in enumerate(again)}
-            chosen.sort(key=lambda one: order[one.hash])
-            more = True
+            chosen.put_in_order(again)
         deadline.stage("shortlist")
-        page = again or [one.hash for one in chosen]
-        cursor = await self._next(session, served, page, now_ms) if more else None
+        page = again or [one.hash for one in chosen.found]
+        cursor = await self._next(session, served, page, now_ms) if chosen.more else None
         answer = FeedAnswer(
             reader=request.reader,
             as_of_ms=session.as_of_ms,
             policy=session.policy,
-            complete=certain and view.whole,
-            items=await self._items(request, session, view, chosen, brought),
+            complete=chosen.certain and view.whole,
+            items=await self._items(reading, chosen),
             next=cursor,
             stages_ms=deadline.stages_ms,
         )
-        if self._exposures and pools:
-            await self._exposures.log(view.reader.hash, session, answer, pools, now_ms)
+        if self._exposures and chosen.pools:
+            await self._exposures.log(view.reader.hash, session, answer, chosen.pools, now_ms)
             deadline.stage("exposure")
         return answer
 
-    def _narrow(
-        self, view: View, gathering: Gathering, before: list[bytes], again: list[bytes], *, profile: bool
-    ) -> None:
-        """Leave out what the pages before have served, and what is hidden; of a page again, all but its own."""
-        if again:
-            gathering.only(again)
-        elif before:
-            gathering.without(before)
-        if profile and len(hidden := view.reader.hidden(view.ranking)):
-            gathering.without([hidden.tobytes()])
+    async def _with_beyond(self, reading: Reading, ties: Chosen, crowd: CrowdBound) -> Chosen:
+        """Mix posts from beyond the ties into a page."""
+        policy, request = reading.view.ranking.policy, reading.request
+        places = Places(policy, reading.session.offset, request.k)
+        need = request.k if reading.again else places.wanted(len(ties.found))
+        found: list[Found] = []
+        surely_all, more = True, True  # where nobody looks, the next page may turn out empty
+        if need:
+            reading.gathering.turn(np.concatenate((crowd.post, np.frombuffer(b"".join(reading.again), dtype="<u8"))))
+            reading.set_bounds(crowd)
+            reading.narrow()
+            reader = outsider(reading.view.reader, request.forms, request.topics)
+            shortlist = await Shortlister(self.reads, reader, reading.gathering, reading.deadline).best(need)
+            unlisted = policy.affinity.crowd * crowd.others
+            surely_all = bool(reading.again) or surely(shortlist, need, unlisted, reading.temperature)
+            found, more = shortlist.found, shortlist.more
+        page = [*ties.found, *found] if reading.again else places.mixed(ties.found, found)
+        certain = ties.certain and surely_all
+        more = ties.more or more or len(page) < len(ties.found) + len(found)
+        pools = ties.pools | ({"beyond": self._pool(reading)} if ties.pools and found else {})
+        ended = certain and len(page) < request.k
+        return Chosen(page, certain, more and not ended, pools, {one.hash for one in ties.found})
 
-    async def _beyond(
-        self,
-        request: FeedRequest,
-        session: Session,
-        view: View,
-        gathering: Gathering,
-        before: list[bytes],
-        again: list[bytes],
-        deadline: Deadline,
-        ties: int,
-        crowd: CrowdBound,
-    ) -> tuple[list[Found], bool, bool]:
-        """Find posts from beyond the ties; say whether they are certain, and whether more may follow."""
-        places = Places(view.ranking.policy, session.offset, request.k)
-        need = request.k if again else places.wanted(ties)
-        if not need:
-            return [], True, True  # nobody has looked: the next page may turn out empty
-        gathering.turn(np.concatenate((crowd.post, np.frombuffer(b"".join(again), dtype="<u8"))))
-        self._set_bounds(session, view, gathering, crowd)
-        self._narrow(view, gathering, before, again, profile=True)
-        reader = outsider(view.reader, request.forms, request.topics)
-        shortlist = await Shortlister(self.reads, reader, gathering, deadline).best(need)
-        policy = view.ranking.policy
-        temperature = policy.temperature if session.explore else 0.0
-        certain = bool(again) or surely(shortlist, need, policy.affinity.crowd * crowd.others, temperature)
-        return shortlist.found, certain, shortlist.more
+    def _pool(self, reading: Reading) -> Pool:
+        return Pool.of(reading.gathering, reading.temperature)
 
     async def view(
         self, reader: str, policy: str, t_ms: int, deadline: Deadline, *, profile: bool
@@ -235,64 +206,46 @@ class Ranker:
         as_of_ms = now_ms if request.as_of_ms is None else max(request.as_of_ms, now_ms)
         return new_session(request, as_of_ms, request.policy or self._policies.default), []
 
-    async def _bound(self, session: Session, view: View, gathering: Gathering, now_ms: int) -> CrowdBound | None:
+    async def _bound(self, reading: Reading, now_ms: int) -> CrowdBound | None:
         """Bound what the candidates stand in order by; newest first knows no crowd."""
-        if session.order == "newest":
-            gathering.by_newest()
+        if reading.session.order == "newest":
+            reading.gathering.by_newest()
             return None
-        crowd = await self.reads.crowd(view.prepared.board, session.as_of_ms, now_ms)
-        self._set_bounds(session, view, gathering, crowd)
+        crowd = await self.reads.crowd(reading.view.prepared.board, reading.session.as_of_ms, now_ms)
+        reading.set_bounds(crowd)
         return crowd
 
-    def _set_bounds(self, session: Session, view: View, gathering: Gathering, crowd: CrowdBound) -> None:
-        policy = view.ranking.policy
-        gathering.bound(
-            Bounds(
-                others=crowd.others,
-                post=crowd.post,
-                crowd=crowd.bound,
-                seen_post=view.reader.seen_post,
-                seen_ms=view.reader.seen_ms,
-                factor=policy.seen_factor,
-                seed=session.seed,
-                temperature=policy.temperature if session.explore else 0.0,
-            )
-        )
-
-    async def _choose(
-        self,
-        request: FeedRequest,
-        session: Session,
-        ranking: Ranking,
-        shortlister: Shortlister,
-        before: list[bytes],
-    ) -> tuple[list[Found], bool, bool]:
-        """Choose a page's posts; say whether they are certain, and whether more may follow."""
-        if session.order == "newest":
+    async def _choose(self, reading: Reading) -> Chosen:
+        """Choose a page's posts among those that ties have brought."""
+        view, request = reading.view, reading.request
+        reader = reader_of(view.reader, view.circle, request)
+        shortlister = Shortlister(self.reads, reader, reading.gathering, reading.deadline)
+        if reading.session.order == "newest":
             shortlist = await shortlister.newest(request.k)
-            return shortlist.found, shortlist.exhausted, shortlist.more
-        gap, need = ranking.policy.author_gap, request.k
-        recent = await self._recent_authors(gap, before)
+            return Chosen(shortlist.found, shortlist.exhausted, shortlist.more)
+        gap, need = view.ranking.policy.author_gap, request.k
+        recent = await self._recent_authors(gap, reading.before)
         while True:
             shortlist = await shortlister.best(need)
             picked = _arrange(shortlist, gap, request.k, recent)
             if picked is not None or shortlist.certain < need:
                 break
             need *= 2
-        chosen = shortlist.found[: request.k] if picked is None else picked
-        return chosen, picked is not None, not shortlist.exhausted or shortlist.total > len(chosen)
+        found = shortlist.found[: request.k] if picked is None else picked
+        more = not shortlist.exhausted or shortlist.total > len(found)
+        pools = {"tie": self._pool(reading)} if self._exposures and not reading.again else {}
+        return Chosen(found, picked is not None, more, pools)
 
-    async def _items(
-        self, request: FeedRequest, session: Session, view: View, chosen: list[Found], brought: set[bytes] | None
-    ) -> list[FeedItem]:
-        items = [_item(one, session) for one in chosen]
-        if brought is not None:
-            for item, one in zip(items, chosen, strict=True):
-                item.source = "tie" if one.hash in brought else "beyond"
-        if request.why and items:
-            posts, kinds = [one.hash for one in chosen], self._store.kinds.names
-            found = await reasons(view, posts, kinds, self._store.connection, session.as_of_ms)
-            for item, one in zip(items, chosen, strict=True):
+    async def _items(self, reading: Reading, chosen: Chosen) -> list[FeedItem]:
+        items = [_item(one, reading.session) for one in chosen.found]
+        if chosen.brought is not None:
+            for item, one in zip(items, chosen.found, strict=True):
+                item.source = "tie" if one.hash in chosen.brought else "beyond"
+        if reading.request.why and items:
+            posts, kinds = [one.hash for one in chosen.found], self._store.kinds.names
+            t_ms = reading.session.as_of_ms
+            found = await reasons(reading.view, posts, kinds, self._store.connection, t_ms)
+            for item, one in zip(items, chosen.found, strict=True):
                 item.why = found.get(one.hash)
         return items
 
