@@ -14,7 +14,7 @@ import redis
 from service.engine import Engine
 from service.events.model import parse_event
 from service.importing.bulk import BulkImporter
-from service.importing.columns import Reader
+from service.importing.parsing import Parser
 from service.importing.summary import Summary
 from service.importing.target import EngineTarget
 from service.importing.windows import windows
@@ -44,8 +44,9 @@ def bulk_load(engine: Engine, run: Run, events: Iterable[Event], now_ms: int, wi
     summary = Summary()
     importer = BulkImporter(EngineTarget(engine, run), lambda: now_ms, lambda _: None, summary)
     content = io.BytesIO(b"\n".join(map(orjson.dumps, events)))
+    parser = Parser(engine.store.meta[b"hash_key"])
     for window in windows(content, most_lines=window_lines):
-        importer.take("events", window, Reader(engine.store.hasher.hash_many).read(window.lines))
+        importer.take("events", window, parser.read(window))
     return summary
 
 

@@ -18,6 +18,7 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 import redis
 from typer.testing import CliRunner
@@ -25,19 +26,17 @@ from typer.testing import CliRunner
 from service.cli.main import build
 from service.embedded import EmbeddedServer
 from service.errors import StoreUnavailable
-from service.events.model import AnyEvent
 from service.importing import bulk
 from service.importing import windows as reading
 from service.importing.archives import opened
 from service.importing.bulk import PAUSES_S, BulkImporter
-from service.importing.columns import Reader
 from service.importing.lines import LINE_BYTES
+from service.importing.parsing import Parser
 from service.importing.run import import_files
 from service.importing.summary import Stop, Summary
-from service.importing.windows import windows
-from service.store.bulk import BulkIngest
+from service.importing.windows import Window, windows
+from service.store.bulk import BulkIngest, Outcomes
 from service.store.bulk_columns import Edges
-from service.store.ids import IdHasher
 from service.store.verdict import APPLIED, Verdict
 from tests.polling import until
 
@@ -262,10 +261,14 @@ def test_embedded_store(tmp_path: Path) -> None:
         assert state(server.url) == 2
 
 
+def split(window: Window) -> list[bytes | None]:
+    return [line for block in window.blocks for line in block.lines()]
+
+
 def seen(path: Path, from_line: int = 1) -> list[tuple[int, bytes | None]]:
     """Numbers and content of all lines that are not blank."""
     with opened(str(path)) as source:
-        read = [some.line(place) for some in windows(source.stream, from_line) for place in range(len(some.lines))]
+        read = [some.line(place) for some in windows(source.stream, from_line) for place in range(some.count)]
         return [(line.number, line.content) for line in read if line.content != b""]
 
 
@@ -286,7 +289,7 @@ def test_endless_line_takes_no_memory() -> None:
         peak_bytes = tracemalloc.get_traced_memory()[1]
     finally:
         tracemalloc.stop()
-    assert [(window.first, window.lines) for window in read] == [(1, [None])]
+    assert [(window.first, split(window)) for window in read] == [(1, [None])]
     assert peak_bytes < 8 << 20
 
 
@@ -321,9 +324,9 @@ def test_ends_of_lines(tmp_path: Path) -> None:
 def test_windows_are_bounded() -> None:
     """A window holds so many lines, and fewer where they are long."""
     short = io.BytesIO(b"1\n" * 2_501)
-    assert [len(some.lines) for some in windows(short, most_lines=1_000)] == [1_000, 1_000, 501]
+    assert [some.count for some in windows(short, most_lines=1_000)] == [1_000, 1_000, 501]
     long = io.BytesIO((b"x" * 1_000 + b"\n") * 1_000)
-    found = [len(some.lines) for some in windows(long, most_bytes=300_000)]
+    found = [some.count for some in windows(long, most_bytes=300_000)]
     assert sum(found) == 1_000
     assert max(found[:-1]) <= (300_000 + (1 << 18)) // 1_000
 
@@ -331,7 +334,7 @@ def test_windows_are_bounded() -> None:
 def test_a_window_ends_where_a_pipe_pauses() -> None:
     """Where nothing comes through a pipe, what there is makes a window; lines keep their numbers."""
     idle = iter([False, True, False, False, False]).__next__
-    found = [(some.first, some.lines) for some in windows(Pieces([b"a\nb\nc", b"d\n", b"e"]), idle=idle)]
+    found = [(some.first, split(some)) for some in windows(Pieces([b"a\nb\nc", b"d\n", b"e"]), idle=idle)]
     assert found == [(1, [b"a", b"b"]), (3, [b"cd", b"e"])]
 
 
@@ -357,14 +360,16 @@ class Away:
 
     retention_ms = 30 * DAY_MS
 
-    def apply(self, events: Sequence[AnyEvent] | Edges, _now_ms: int) -> list[Verdict]:
+    def apply(self, events: Sequence[object] | Edges, _now_ms: int) -> list[Verdict]:
         """Fail, or take the events."""
         self.calls.append(len(events))
         if self.first < len(self.calls) <= self.first + self.failures:
             raise StoreUnavailable
         return [APPLIED] * len(events)
 
-    apply_edges = apply
+    def apply_edges(self, edges: Edges, now_ms: int) -> tuple[Outcomes, dict[int, Verdict]]:
+        """Fail, or apply all."""
+        return np.zeros(len(edges), np.uint8), {0: self.apply([APPLIED] * len(edges), now_ms)[0]}
 
     def kind_codes(self, kinds: Sequence[str]) -> list[int]:
         """Know all kinds."""
@@ -374,7 +379,7 @@ class Away:
         """Import a file."""
         summary = Summary()
         importer = BulkImporter(self, now_ms, self.pauses.append, summary)
-        import_files([str(path)], 1, importer, lambda lines: Reader(IdHasher(b"").hash_many).read(lines))
+        import_files([str(path)], 1, importer, Parser(b"").read)
         return summary
 
 

@@ -5,7 +5,7 @@ interactions that were read as columns; then all the rest in the order of its li
 """
 
 from collections import Counter
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import partial
 from typing import Final, Protocol, TypeVar
@@ -21,6 +21,7 @@ from service.importing.columns import Columns
 from service.importing.lines import LINE_BYTES, Line
 from service.importing.summary import Rejected, Summary
 from service.importing.windows import Window
+from service.store.bulk import Outcomes
 from service.store.bulk_columns import Edges
 from service.store.ingest import AHEAD_MS
 from service.store.verdict import DUPLICATE, EXPIRED, Verdict
@@ -33,6 +34,9 @@ BATCH_LINES: Final = 1_000
 
 PAUSES_S: Final = (0.5, 1.0, 2.0, 4.0)
 """How long to wait before each further try, seconds."""
+
+_EXPIRED: Final = 255
+"""Stands where an interaction is past retention; no outcome of the store's has this code."""
 
 TOO_LONG: Final = f"the line is longer than {LINE_BYTES} bytes"
 
@@ -47,8 +51,8 @@ class Target(Protocol):
     def apply(self, events: Sequence[AnyEvent], now_ms: int) -> list[Verdict]:
         """Apply events one by one."""
 
-    def apply_edges(self, edges: Edges, now_ms: int) -> list[Verdict]:
-        """Apply interactions at once."""
+    def apply_edges(self, edges: Edges, now_ms: int) -> tuple[Outcomes, dict[int, Verdict]]:
+        """Apply interactions at once; the outcome of each, and what each outcome means."""
 
     def kind_codes(self, kinds: Sequence[str]) -> list[int]:
         """Give the codes of kinds, -1 for those that can't be taken."""
@@ -85,6 +89,15 @@ class _Counts:
         for place, verdict in zip(places, verdicts, strict=True):
             if verdict.outcome == "rejected":
                 self.reasons[place] = verdict.reason or "it is not allowed"
+
+    def add_outcomes(self, places: Rows, outcomes: Outcomes, meaning: Mapping[int, Verdict]) -> None:
+        """Count the outcomes of some lines."""
+        for outcome, count in zip(*np.unique(outcomes, return_counts=True), strict=True):
+            verdict = meaning[int(outcome)]
+            if verdict.outcome == "rejected":
+                self.add(places[outcomes == outcome].tolist(), [verdict] * int(count))
+            else:
+                self.outcomes[verdict.outcome] += int(count)
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,19 +148,19 @@ class BulkImporter:
         """Apply rows at once; a repeat is what its first is, and a duplicate where that counts already."""
         if not len(rows.fresh):
             return
-        verdicts = np.empty(len(columns.places), object)
+        outcomes = np.full(len(columns.places), _EXPIRED, np.uint8)
 
-        def apply(now_ms: int) -> list[Verdict]:
-            expired = now_ms - columns.at_ms[rows.fresh] > self.target.retention_ms
-            verdicts[rows.fresh[expired]] = EXPIRED
-            timely = rows.fresh[~expired]
-            return self.target.apply_edges(_edges(columns, codes, timely), now_ms) if len(timely) else []
+        def apply(now_ms: int) -> dict[int, Verdict]:
+            timely = rows.fresh[now_ms - columns.at_ms[rows.fresh] <= self.target.retention_ms]
+            if not len(timely):
+                return {}
+            outcomes[timely], meaning = self.target.apply_edges(_edges(columns, codes, timely), now_ms)
+            return meaning
 
-        found = self._persist(apply)
-        verdicts[rows.fresh[[verdict is None for verdict in verdicts[rows.fresh]]]] = found
-        counts.add(columns.places[rows.fresh].tolist(), verdicts[rows.fresh].tolist())
-        again = [DUPLICATE if one.outcome == "applied" else one for one in verdicts[rows.firsts]]
-        counts.add(columns.places[rows.twins].tolist(), again)
+        meaning = self._persist(apply) | {_EXPIRED: EXPIRED}
+        counts.add_outcomes(columns.places[rows.fresh], outcomes[rows.fresh], meaning)
+        again = {code: DUPLICATE if one.outcome == "applied" else one for code, one in meaning.items()}
+        counts.add_outcomes(columns.places[rows.twins], outcomes[rows.firsts], again)
 
     def _persist(self, apply: Callable[[int], T]) -> T:
         """Apply; where the store is away, wait and try again, which changes nothing but the counts."""
@@ -169,7 +182,7 @@ class BulkImporter:
 
 def _chosen(columns: Columns, codes: NDArray[np.int64], now_ms: int) -> _Rows:
     """Choose the rows that are taken at once: of known kinds, not too far ahead, no two of one identity but twins."""
-    first, count = _firsts(columns), len(columns.places)
+    first, count = columns.firsts, len(columns.places)
     itself = first == np.arange(count)
     good = (columns.at_ms <= now_ms + AHEAD_MS) & (codes[columns.kinds] >= 0) if count else itself
     same = np.ones(count, np.bool_)
@@ -178,17 +191,6 @@ def _chosen(columns: Columns, codes: NDArray[np.int64], now_ms: int) -> _Rows:
     twins = np.flatnonzero(good & ~itself & same)
     slow = columns.places[~(good & (itself | same))].tolist()
     return _Rows(np.flatnonzero(good & itself), twins, first[twins], sorted(columns.others + slow))
-
-
-def _firsts(columns: Columns) -> Rows:
-    """Give for each row the first one by the same actor with the same id."""
-    order = np.lexsort((columns.people, columns.ids))
-    ids, people = columns.ids[order], columns.people[order]
-    new = np.ones(len(order), np.bool_)
-    new[1:] = (ids[1:] != ids[:-1]) | (people[1:] != people[:-1])
-    first = np.empty_like(order)
-    first[order] = order[np.flatnonzero(new)[np.cumsum(new) - 1]]
-    return first
 
 
 def _edges(columns: Columns, codes: NDArray[np.int64], rows: Rows) -> Edges:

@@ -42,6 +42,7 @@ class Columns:
         person_ids: the id of each person's hash.
         post_ids: the id of each post's hash.
         others: the lines that are left to the model.
+        firsts: for each row the first one by the same actor with the same id.
 
     """
 
@@ -55,6 +56,7 @@ class Columns:
     person_ids: dict[int, str]
     post_ids: dict[int, str]
     others: list[int]
+    firsts: NDArray[np.intp]
 
 
 class Reader:
@@ -67,6 +69,8 @@ class Reader:
 
     def __init__(self, hash_many: HashMany) -> None:
         self._hash_many = hash_many
+        self._count = 0
+        self._waiting: list[bytes | None] = []
         self._people = _Names(hash_many)
         self._posts = _Names(hash_many)
         self._kinds: dict[str, int] = {}
@@ -74,16 +78,32 @@ class Reader:
         self._others: list[int] = []
 
     def read(self, lines: Sequence[bytes | None]) -> Columns:
-        """Read all lines; None and blank ones are left out."""
-        for first in range(0, len(lines), AT_ONCE):
-            self._read_some(first, lines[first : first + AT_ONCE])
+        """Read all lines of a window; None and blank ones are left out."""
+        self.add(lines)
+        return self.columns()
+
+    def add(self, lines: Sequence[bytes | None]) -> None:
+        """Read the next lines of the window; they are read together with those before and after."""
+        self._waiting += lines
+        if len(self._waiting) >= AT_ONCE:
+            self._read_waiting()
+
+    def columns(self) -> Columns:
+        """Give what was read."""
+        self._read_waiting()
         columns: list[NDArray[Any]] = list(_EMPTY)
         if self._parts:
             columns = [np.concatenate(column) for column in zip(*self._parts, strict=True)]
         places, ids, people, posts, at_ms, kinds = columns
         names = list(self._kinds)
-        person_ids, post_ids = self._people.ids, self._posts.ids
-        return Columns(places, ids, people, posts, at_ms, kinds, names, person_ids, post_ids, sorted(self._others))
+        person_ids, post_ids, others = self._people.ids, self._posts.ids, sorted(self._others)
+        firsts = _firsts(ids, people)
+        return Columns(places, ids, people, posts, at_ms, kinds, names, person_ids, post_ids, others, firsts)
+
+    def _read_waiting(self) -> None:
+        some, self._waiting = self._waiting, []
+        self._read_some(self._count, some)
+        self._count += len(some)
 
     def _read_some(self, first: int, lines: Sequence[bytes | None]) -> None:
         places, rows = [], []
@@ -181,3 +201,13 @@ def _valid(texts: Sequence[Any]) -> NDArray[np.bool_]:
 
 def _is_id(text: object) -> bool:
     return isinstance(text, str) and 0 < len(text.encode()) <= ID_BYTES and CONTROLS.search(text) is None
+
+
+def _firsts(ids: _U64, people: _U64) -> NDArray[np.intp]:
+    order = np.lexsort((people, ids))
+    ids, people = ids[order], people[order]
+    new = np.ones(len(order), np.bool_)
+    new[1:] = (ids[1:] != ids[:-1]) | (people[1:] != people[:-1])
+    first = np.empty_like(order)
+    first[order] = order[np.flatnonzero(new)[np.cumsum(new) - 1]]
+    return first

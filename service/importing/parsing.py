@@ -3,11 +3,11 @@
 import contextlib
 import multiprocessing
 import signal
-from collections.abc import Sequence
 from multiprocessing.connection import Connection
 from typing import Final, Self, cast
 
-from service.importing.columns import Columns, Reader
+from service.importing.columns import Columns, HashMany, Reader
+from service.importing.windows import Window
 from service.store.ids import IdHasher
 
 WORTH_A_PROCESS: Final = 50_000
@@ -26,6 +26,7 @@ class Parser:
         self._hash_key = hash_key
         self._hash_many = IdHasher(hash_key).hash_many
         self._line: Connection | None = None
+        self._gone = False
 
     def __enter__(self) -> Self:
         return self
@@ -34,15 +35,20 @@ class Parser:
         if self._line is not None:
             self._line.close()
 
-    def read(self, lines: Sequence[bytes | None]) -> Columns:
-        """Read the lines of one window; see `Reader.read`."""
-        if self._line is None and len(lines) < WORTH_A_PROCESS:
-            return Reader(self._hash_many).read(lines)
-        if self._line is None:
-            self._line = self._start()
-        self._line.send([place for place, line in enumerate(lines) if line is None])
-        self._line.send_bytes(b"\n".join([line or b"" for line in lines]))
-        return cast("Columns", self._line.recv())
+    def read(self, window: Window) -> Columns:
+        """Read the lines of one window; where the process is gone, for lack of memory say, they are read here."""
+        if self._gone or (self._line is None and window.count < WORTH_A_PROCESS):
+            return _read_here(self._hash_many, window)
+        try:
+            if self._line is None:
+                self._line = self._start()
+            self._line.send(len(window.blocks))
+            for block in window.blocks:
+                self._line.send(block)
+            return cast("Columns", self._line.recv())
+        except (EOFError, OSError):
+            self._gone = True
+            return _read_here(self._hash_many, window)
 
     def _start(self) -> Connection:
         context = multiprocessing.get_context("spawn")
@@ -52,14 +58,20 @@ class Parser:
         return ours
 
 
+def _read_here(hash_many: HashMany, window: Window) -> Columns:
+    reader = Reader(hash_many)
+    for block in window.blocks:
+        reader.add(block.lines())
+    return reader.columns()
+
+
 def _serve(line: Connection, hash_key: bytes) -> None:
     """Take windows apart until the other side is gone; Ctrl-C is the other side's to act on."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     hash_many = IdHasher(hash_key).hash_many
     with contextlib.suppress(EOFError, OSError):
         while True:
-            absent = line.recv()
-            lines: list[bytes | None] = list(line.recv_bytes().split(b"\n"))
-            for place in absent:
-                lines[place] = None
-            line.send(Reader(hash_many).read(lines))
+            reader = Reader(hash_many)
+            for _ in range(line.recv()):
+                reader.add(line.recv().lines())
+            line.send(reader.columns())

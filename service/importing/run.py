@@ -16,7 +16,7 @@ from service.importing.windows import Window, windows
 
 _LOOK_S = 0.1
 
-Read = Callable[[Sequence[bytes | None]], Columns]
+Read = Callable[[Window], Columns]
 
 STAYED_AWAY = f"the store did not answer, {len(PAUSES_S) + 1} times in a row"
 
@@ -43,7 +43,7 @@ def import_files(
         names: paths; `-` is standard input.
         from_line: the first line of the first file that counts.
         importer: applies the windows.
-        read: takes the lines of a window apart; called in a thread of its own.
+        read: takes a window apart; called in a thread of its own.
         on_window: called after each window with the file's name and how many of its stored bytes were read.
 
     Raises:
@@ -71,7 +71,7 @@ def _import_one(
         for ready in ahead(source, from_line, read):
             line = ready.window.first
             importer.take(name, ready.window, ready.columns)
-            line = ready.window.first + len(ready.window.lines)
+            line = ready.window.first + ready.window.count
             on_window(name, ready.consumed_bytes)
     except DamagedError as error:
         importer.summary.stop = Stop("damaged", name, error.line + 1, error.detail)
@@ -89,7 +89,7 @@ def ahead(source: Source, from_line: int, read: Read) -> Iterator[Ready]:
     Args:
         source: the input.
         from_line: the first line that counts.
-        read: takes the lines of a window apart.
+        read: takes a window apart.
 
     Raises:
         DamagedError: it can't be read to its end.
@@ -101,6 +101,7 @@ def ahead(source: Source, from_line: int, read: Read) -> Iterator[Ready]:
     try:
         while True:
             ready = reading.out.get()
+            reading.taken.set()
             if isinstance(ready, Exception):
                 raise ready
             if ready is None:
@@ -121,13 +122,14 @@ class _Reading:
     Args:
         source: the input.
         from_line: the first line that counts.
-        read: takes the lines of a window apart.
+        read: takes a window apart.
 
     """
 
     def __init__(self, source: Source, from_line: int, read: Read) -> None:
-        self.out: queue.Queue[Ready | Exception | None] = queue.Queue(1)
+        self.out: queue.SimpleQueue[Ready | Exception | None] = queue.SimpleQueue()
         self.stopped = threading.Event()
+        self.taken = threading.Event()
         self._source, self._from_line, self._read = source, from_line, read
 
     def work(self) -> None:
@@ -135,7 +137,7 @@ class _Reading:
         with contextlib.suppress(_StoppedError):
             try:
                 for window in windows(self._source.stream, self._from_line, idle=self._idle):
-                    self._put(Ready(window, self._read(window.lines), self._source.consumed_bytes))
+                    self._put(Ready(window, self._read(window), self._source.consumed_bytes))
                 self._put(None)
             except _StoppedError:
                 raise
@@ -148,8 +150,9 @@ class _Reading:
         return self._source.is_idle()
 
     def _put(self, ready: Ready | Exception | None) -> None:
-        while not self.stopped.is_set():
-            with contextlib.suppress(queue.Full):
-                self.out.put(ready, timeout=_LOOK_S)
-                return
-        raise _StoppedError
+        """Hand over, and wait until that is taken: more than one window ahead would only take memory."""
+        self.taken.clear()
+        self.out.put(ready)
+        while not self.taken.wait(_LOOK_S):
+            if self.stopped.is_set():
+                raise _StoppedError

@@ -3,8 +3,11 @@
 from collections.abc import Callable, Coroutine, Sequence
 from typing import Any
 
+import numpy as np
+
 from service.engine import Engine
 from service.events.model import AnyEvent
+from service.store.bulk import Outcomes
 from service.store.bulk_columns import Edges
 from service.store.ingest import verdict_of
 from service.store.verdict import Verdict
@@ -31,11 +34,11 @@ class EngineTarget:
         verdicts: list[Verdict] = self._run(self._engine.apply(events, now_ms))
         return verdicts
 
-    def apply_edges(self, edges: Edges, now_ms: int) -> list[Verdict]:
+    def apply_edges(self, edges: Edges, now_ms: int) -> tuple[Outcomes, dict[int, Verdict]]:
         """Apply interactions at once; see `service.store.bulk.BulkIngest.apply`."""
-        outcomes = self._run(self._engine.store.bulk.apply(edges, now_ms)).tolist()
-        verdicts = {outcome: verdict_of(outcome, self._engine.store.limits) for outcome in set(outcomes)}
-        return [verdicts[outcome] for outcome in outcomes]
+        outcomes: Outcomes = self._run(self._engine.store.bulk.apply(edges, now_ms))
+        found = np.unique(outcomes).tolist()
+        return outcomes, {outcome: verdict_of(outcome, self._engine.store.limits) for outcome in found}
 
     def kind_codes(self, kinds: Sequence[str]) -> list[int]:
         """Register kinds; give the code of each, -1 for those that no policy knows or the store has no room for."""

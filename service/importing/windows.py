@@ -1,5 +1,6 @@
 """Read a file's lines in large windows."""
 
+from bisect import bisect_right
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from typing import BinaryIO, Final
@@ -7,11 +8,40 @@ from typing import BinaryIO, Final
 from service.importing.archives import DAMAGE
 from service.importing.lines import LINE_BYTES, DamagedError, Line
 
-WINDOW_LINES: Final = 400_000
+WINDOW_LINES: Final = 600_000
 WINDOW_BYTES: Final = 96 << 20
 
-_BLOCK_BYTES: Final = 1 << 18
+_READ_BYTES: Final = 1 << 18
 _BYTE_ORDER_MARK: Final = b"\xef\xbb\xbf"
+
+
+@dataclass(frozen=True, slots=True)
+class Block:
+    """Whole lines as they were read together.
+
+    Args:
+        text: the lines, without the end of the last.
+        count: how many they are.
+        first_is_long: the first was too long to be taken; an empty line stands for it.
+
+    """
+
+    text: bytes
+    count: int
+    first_is_long: bool = False
+
+    def lines(self) -> list[bytes | None]:
+        """Split it; None stands for a line that is too long."""
+        lines: list[bytes | None] = list(self.text.split(b"\n"))
+        if self.first_is_long:
+            lines[0] = None
+        return lines
+
+    def cut(self, count: int) -> tuple["Block", "Block"]:
+        """Cut it in two after so many lines, at least 1 and fewer than there are."""
+        parts = self.text.split(b"\n", count)
+        head = Block(b"\n".join(parts[:count]), count, self.first_is_long)
+        return head, Block(parts[count], self.count - count)
 
 
 @dataclass(slots=True)
@@ -20,18 +50,45 @@ class Window:
 
     Args:
         first: number of the first, from 1.
-        lines: their bytes; None where one is too long to be taken.
-        bytes: of all lines together.
 
     """
 
     first: int
-    lines: list[bytes | None] = field(default_factory=list)
-    bytes: int = 0
+    blocks: list[Block] = field(default_factory=list)
+    count: int = 0
+    size_bytes: int = 0
+    _starts: list[int] = field(default_factory=list)
+    _split: tuple[int, list[bytes | None]] = (-1, [])
+
+    def add(self, block: Block) -> None:
+        """Add lines at its end; what came in small pieces is put together."""
+        last = self.blocks[-1] if self.blocks else None
+        if last and not block.first_is_long and len(last.text) + len(block.text) <= _READ_BYTES:
+            text = last.text + b"\n" + block.text
+            self.blocks[-1] = Block(text, last.count + block.count, last.first_is_long)
+        else:
+            self._starts.append(self.count)
+            self.blocks.append(block)
+        self.count += block.count
+        self.size_bytes += len(block.text)
+
+    def cut(self, most_lines: int) -> tuple["Window", "Window"]:
+        """Cut off what is beyond so many lines, all of it in the last block; it begins the next window."""
+        rest = Window(self.first + min(self.count, most_lines))
+        if self.count > most_lines:
+            start, last = self._starts.pop(), self.blocks.pop()
+            self.count, self.size_bytes = start, self.size_bytes - len(last.text)
+            head, tail = last.cut(most_lines - start)
+            self.add(head)
+            rest.add(tail)
+        return self, rest
 
     def line(self, place: int) -> Line:
-        """Give the line at a place, from 0."""
-        content = self.lines[place]
+        """Give the line at a place, from 0; quick where places rise."""
+        number = bisect_right(self._starts, place) - 1
+        if self._split[0] != number:
+            self._split = (number, self.blocks[number].lines())
+        content = self._split[1][place - self._starts[number]]
         return Line(self.first + place, None if content is None else content.strip())
 
 
@@ -56,63 +113,63 @@ def windows(
         DamagedError: it can't be read to its end; all whole lines before are in the windows given.
 
     >>> import io
-    >>> [(w.first, w.lines) for w in windows(io.BytesIO(b"one\n\ntwo"), 2)]
+    >>> [(w.first, [b.text for b in w.blocks]) for w in windows(io.BytesIO(b"one\n\ntwo"), 2)]
     [(2, [b'', b'two'])]
 
     """
     window, number, most_lines = Window(from_line), 0, most_lines or WINDOW_LINES
     try:
-        for lines in _split(stream, idle):
-            before, number = number, number + len(lines)
-            counted = lines[max(0, from_line - 1 - before) :]
-            window.lines += counted
-            window.bytes += sum(len(line) for line in counted if line is not None)
-            while len(window.lines) >= most_lines or window.bytes >= most_bytes:
-                full, window = _cut(window, most_lines)
+        for block in _blocks(stream, idle):
+            if block is not None:
+                skipped = min(block.count, max(0, from_line - 1 - number))
+                number += block.count
+                if skipped < block.count:
+                    window.add(block.cut(skipped)[1] if skipped else block)
+            while window.count >= most_lines:
+                full, window = window.cut(most_lines)
                 yield full
-            if not lines and window.lines:
-                full, window = _cut(window, most_lines)
+            if window.count and (block is None or window.size_bytes >= most_bytes):
+                full, window = window.cut(most_lines)
                 yield full
     except DAMAGE as error:
-        if window.lines:
+        if window.count:
             yield window
         raise DamagedError(number, str(error) or type(error).__name__) from error
-    if window.lines:
+    if window.count:
         yield window
 
 
-def _cut(window: Window, most_lines: int) -> tuple[Window, Window]:
-    """Cut a full window off; what is left begins the next."""
-    rest = Window(window.first + len(window.lines[:most_lines]), window.lines[most_lines:])
-    rest.bytes = sum(len(line) for line in rest.lines if line is not None)
-    return Window(window.first, window.lines[:most_lines], window.bytes - rest.bytes), rest
-
-
-def _split(stream: BinaryIO, idle: Callable[[], bool]) -> Iterator[list[bytes | None]]:
-    """Split what is read into whole lines; of one that is too long only a None is left, of a pause an empty list."""
+def _blocks(stream: BinaryIO, idle: Callable[[], bool]) -> Iterator[Block | None]:
+    """Read whole lines; of one that is too long nothing is kept, and for a pause None is given."""
     read = getattr(stream, "read1", stream.read)
     carry, skipping, begun = b"", False, False
     while True:
         while idle():
-            yield []
-        block = read(_BLOCK_BYTES)
-        if not block:
+            yield None
+        data = read(_READ_BYTES)
+        if not data:
             break
-        lines: list[bytes | None] = list((carry + block).split(b"\n"))
-        carry = lines.pop() or b""
-        if lines and (skipping or len(lines[0] or b"") > LINE_BYTES):
-            lines[0], skipping = None, False
+        text = carry + data
+        end = text.rfind(b"\n")
+        if end >= 0:
+            block = _block(text[:end], skipping=skipping, begun=begun)
+            carry, skipping, begun = text[end + 1 :], False, True
+            yield block
+        else:
+            carry = text
         if skipping or len(carry) > LINE_BYTES:
             carry, skipping = b"", True
-        if lines and not begun:
-            lines[0], begun = _without_mark(lines[0]), True
-        if lines:
-            yield lines
-    if skipping:
-        yield [None]
-    elif carry:
-        yield [carry if begun else _without_mark(carry)]
+    if skipping or carry:
+        yield _block(carry, skipping=skipping, begun=begun)
 
 
-def _without_mark(line: bytes | None) -> bytes | None:
-    return None if line is None else line.removeprefix(_BYTE_ORDER_MARK)
+def _block(text: bytes, *, skipping: bool, begun: bool) -> Block:
+    """Make a block; only its first line can be too long, as all others were read in one go."""
+    end = text.find(b"\n")
+    first_bytes = len(text) if end < 0 else end
+    long = skipping or first_bytes > LINE_BYTES
+    if long:
+        text = text[first_bytes:]
+    elif not begun:
+        text = text.removeprefix(_BYTE_ORDER_MARK)
+    return Block(text, text.count(b"\n") + 1, long)

@@ -91,12 +91,19 @@ class BulkIngest:
             StoreUnavailable: the store does not answer; the same again ends in the same state.
 
         """
-        authors = await self._authors(edges.posts)
-        outcomes, entries = await self._take(edges, authors, now_ms)
+        groups = grouped(edges.posts, edges.at_ms)
+        authors, people = await asyncio.gather(self._authors(groups), asyncio.to_thread(PeopleSide, edges))
+        building = asyncio.create_task(asyncio.to_thread(PostsSide, edges, groups, now_ms, self._half_lives_ms))
+        try:
+            outcomes, entries = await self._take(people, authors, now_ms)
+        finally:
+            side = await building
         if not entries:
             return outcomes
         taken = np.flatnonzero(outcomes == APPLIED)
-        side = PostsSide(edges.rows(taken), now_ms, self._half_lives_ms)
+        if len(taken) < len(edges):
+            some = edges.rows(taken)
+            side = PostsSide(some, grouped(some.posts, some.at_ms), now_ms, self._half_lives_ms)
         answers = await self._add(side, entries, now_ms)
         if not self._plain(side.groups, answers, authors[taken]):
             refused = await self._drive(entries, now_ms)
@@ -108,17 +115,16 @@ class BulkIngest:
         await self._end(entries, edges.people[taken], side.groups, marks)
         return outcomes
 
-    async def _authors(self, posts: Hashes) -> Hashes:
+    async def _authors(self, groups: Groups) -> Hashes:
         """Read the author of each row's post, 0 where it is not known."""
-        groups = grouped(posts)
         hashes = hash_list(groups.keys)
         answers = await self._run([bulk_calls.bulk_read_authors(hashes[a:b]) for _, a, b in groups.buckets])
         return per_row(groups, np.frombuffer(b"".join(answers), np.uint64))
 
-    async def _take(self, edges: Edges, authors: Hashes, now_ms: int) -> tuple[Outcomes, list[_Open]]:
-        side = PeopleSide(edges, authors)
-        groups, ordered = side.groups, np.zeros(len(edges), np.uint8)
-        answers = await self._many([self._taking(side, now_ms, *place) for place in groups.buckets])
+    async def _take(self, side: PeopleSide, authors: Hashes, now_ms: int) -> tuple[Outcomes, list[_Open]]:
+        groups, ordered = side.groups, np.zeros(len(authors), np.uint8)
+        packed = authors[groups.order].tobytes()
+        answers = await self._many([self._taking(side, packed, now_ms, *place) for place in groups.buckets])
         entries: list[_Open] = []
         unsettled: list[Entry] = []
         for (number, first, _), (seq, low, exceptions, members) in zip(groups.buckets, answers, strict=True):
@@ -138,8 +144,10 @@ class BulkIngest:
         sources = ",".join(f"{entry.bucket}e,{entry.seq},{entry.low}" for entry in entries)
         return await self._many([self._adding(side, sources, now_ms, *place) for place in side.groups.buckets])
 
-    def _taking(self, side: PeopleSide, now_ms: int, number: int, first: int, end: int) -> Callable[[], Call]:
-        return lambda: bulk_calls.bulk_take_interactions(number, now_ms, self._limits, side.runs(first, end))
+    def _taking(
+        self, side: PeopleSide, authors: bytes, now_ms: int, number: int, first: int, end: int
+    ) -> Callable[[], Call]:
+        return lambda: bulk_calls.bulk_take_interactions(number, now_ms, self._limits, side.runs(authors, first, end))
 
     def _adding(
         self, side: PostsSide, sources: str, now_ms: int, number: int, first: int, end: int

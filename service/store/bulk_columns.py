@@ -131,11 +131,10 @@ class PeopleSide:
 
     Args:
         edges: the interactions.
-        authors: the hash of the author of each one's post, 0 where unknown.
 
     """
 
-    def __init__(self, edges: Edges, authors: Hashes) -> None:
+    def __init__(self, edges: Edges) -> None:
         self.groups = grouped(edges.people)
         order, stamps = self.groups.order, edges.stamps
         names = [edges.post_ids[post].encode() for post in edges.posts[order].tolist()]
@@ -147,19 +146,19 @@ class PeopleSide:
         self._person_ids = [edges.person_ids[person] for person in self.groups.keys.tolist()]
         self._people = hash_list(self.groups.keys)
         self._ids, self._edges = edges.ids[order].tobytes(), packed.tobytes()
-        self._authors, self._heads, self._names = authors[order].tobytes(), heads.tobytes(), names
+        self._heads, self._names = heads.tobytes(), names
         sizes = heads["bytes"].astype(np.int64) + 5
         self._sizes = np.add.reduceat(sizes, self.groups.first[:-1]) if len(order) else sizes
 
-    def runs(self, first: int, end: int) -> PeopleRuns:
-        """Pack the groups of one bucket."""
+    def runs(self, authors: bytes, first: int, end: int) -> PeopleRuns:
+        """Pack the groups of one bucket; `authors` are those of the posts, packed and in order."""
         a, b = int(self.groups.first[first]), int(self.groups.first[end])
         width, heads = _PIECE.itemsize, self._heads
         pieces = [heads[width * i : width * i + width] + self._names[i] for i in range(a, b)]
         ids, counts = self._person_ids[first:end], self.groups.counts[first:end].tolist()
         tails = _flat(zip(ids, counts, self._sizes[first:end].tolist(), strict=True))
         ids_run, edges_run = self._ids[8 * a : 8 * b], self._edges[16 * a : 16 * b]
-        authors_run = self._authors[8 * a : 8 * b]
+        authors_run = authors[8 * a : 8 * b]
         return PeopleRuns(self._people[first:end], ids_run, edges_run, authors_run, b"".join(pieces), tails)
 
 
@@ -171,13 +170,14 @@ class PostsSide:
 
     Args:
         edges: the interactions.
+        groups: they by their posts, in order of time.
         now_ms: now, Unix milliseconds.
         half_lives_ms: the bank.
 
     """
 
-    def __init__(self, edges: Edges, now_ms: int, half_lives_ms: Sequence[float]) -> None:
-        self.groups = grouped(edges.posts, edges.at_ms)
+    def __init__(self, edges: Edges, groups: Groups, now_ms: int, half_lives_ms: Sequence[float]) -> None:
+        self.groups = groups
         order, counts = self.groups.order, self.groups.counts
         at_ms, stamps = edges.at_ms[order], edges.stamps[order]
         self._post_ids = [edges.post_ids[post] for post in self.groups.keys.tolist()]
