@@ -36,8 +36,9 @@ PLUS = b"+" + B + A
 WRITE = calls.PostWrite(A, "bed", B, "mina", NOW_MS, "e1", 0, "note", "beans", 1)
 TIE = calls.TieWrite(A, B, "joel", NOW_MS, 1, "e2")
 
-PEOPLE = PeopleRuns([A, B], A + B + C, (A + B) * 3, C * 3, pack(INTERACTION, B * 3) * 3, ["mina", 1, 29, "joel", 2, 58])
-POSTS = PostRuns([A, B], B * 2, b"", C * 2, ["bed", 1, 0, 1, "plot", 1, 0, 1])
+SIZES = struct.pack("<4I", 1, 29, 2, 58)
+PEOPLE = PeopleRuns([A, B], A + B + C, (A + B) * 3, C * 3, pack(INTERACTION, B * 3) * 3, SIZES, ["mina", "joel"])
+POSTS = PostRuns([A, B], B * 2, b"", C * 2, struct.pack("<6I", 1, 0, 1, 1, 0, 1), ["bed", "plot"])
 
 SAMPLES: dict[str, tuple[Callable[[], Call], tuple[int, ...], tuple[int, ...]]] = {
     "add_edges": (

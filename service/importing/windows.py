@@ -10,6 +10,8 @@ from service.importing.lines import LINE_BYTES, DamagedError, Line
 
 WINDOW_LINES: Final = 600_000
 WINDOW_BYTES: Final = 96 << 20
+FIRST_LINES: Final = 100_000
+"""The first window is smaller, so that the server soon has something to do."""
 
 _READ_BYTES: Final = 1 << 18
 _BYTE_ORDER_MARK: Final = b"\xef\xbb\xbf"
@@ -105,7 +107,8 @@ def windows(
     Args:
         stream: text in UTF-8; a byte order mark at its beginning counts for nothing.
         from_line: the first that counts, from 1.
-        most_lines: so many lines make a window, `WINDOW_LINES` where nothing is said.
+        most_lines: so many lines make a window, `WINDOW_LINES` where nothing is said, and no more than `FIRST_LINES`
+            the first.
         most_bytes: about as many bytes make a window.
         idle: called before each read; says whether nothing would come now: a window then ends, however small it is.
 
@@ -117,7 +120,8 @@ def windows(
     [(2, [b'', b'two'])]
 
     """
-    window, number, most_lines = Window(from_line), 0, most_lines or WINDOW_LINES
+    window, number, later_lines = Window(from_line), 0, most_lines or WINDOW_LINES
+    most_lines = min(FIRST_LINES, later_lines)
     try:
         for block in _blocks(stream, idle):
             if block is not None:
@@ -127,6 +131,7 @@ def windows(
                     window.add(block.cut(skipped)[1] if skipped else block)
             while window.count >= most_lines:
                 full, window = window.cut(most_lines)
+                most_lines = later_lines
                 yield full
             if window.count and (block is None or window.size_bytes >= most_bytes):
                 full, window = window.cut(most_lines)

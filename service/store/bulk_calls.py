@@ -23,7 +23,8 @@ class PeopleRuns:
         edges: packed edges, 16 bytes each.
         authors: hashes of the posts' authors, 8 bytes each, zeros where unknown.
         pieces: outbox pieces.
-        tails: for each person the id, how many events, and how many bytes of pieces.
+        sizes: for each person how many events, and how many bytes of pieces, 4 bytes each.
+        names: for each person the id.
 
     """
 
@@ -32,7 +33,8 @@ class PeopleRuns:
     edges: bytes
     authors: bytes
     pieces: bytes
-    tails: list[Argument]
+    sizes: bytes
+    names: list[str]
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,7 +46,8 @@ class PostRuns:
         stamps: of the edges that may stay as they are, in order of time, 8 bytes each.
         sums: running sums of the older ones, as a post's value has them.
         actors: hashes of who made the edges, 8 bytes each.
-        tails: for each post the id, how many stamps, how many kinds in `sums`, and how many edges.
+        sizes: for each post how many stamps, how many kinds in `sums`, and how many edges, 4 bytes each.
+        names: for each post the id.
 
     """
 
@@ -52,7 +55,8 @@ class PostRuns:
     stamps: bytes
     sums: bytes
     actors: bytes
-    tails: list[Argument]
+    sizes: bytes
+    names: list[str]
 
 
 def bulk_take_interactions(number: int, now_ms: int, limits: StoreLimits, runs: PeopleRuns) -> Call:
@@ -61,8 +65,8 @@ def bulk_take_interactions(number: int, now_ms: int, limits: StoreLimits, runs: 
     script_keys = [keys.seq(number), keys.outbox(number)]
     script_keys += [one for person in zip(*columns, strict=True) for one in person]
     args: list[Argument] = [now_ms * 1000, limits.oldest_ms(now_ms), limits.ttl_ms, limits.row_edges]
-    args += [runs.ids, runs.edges, runs.authors, runs.pieces]
-    return Call(load("bulk_take_interactions"), script_keys, args + runs.tails)
+    args += [runs.ids, runs.edges, runs.authors, runs.pieces, runs.sizes]
+    return Call(load("bulk_take_interactions"), script_keys, [*args, *runs.names])
 
 
 def bulk_add_edges(number: int, sources: str, now_ms: int, limits: StoreLimits, runs: PostRuns) -> Call:
@@ -70,8 +74,8 @@ def bulk_add_edges(number: int, sources: str, now_ms: int, limits: StoreLimits, 
     columns = [keys.keys(name, runs.posts) for name in ("post", "wait")]
     script_keys = [keys.applied(number), *(one for post in zip(*columns, strict=True) for one in post)]
     args: list[Argument] = [sources, now_ms, limits.ttl_ms, limits.half_lives]
-    args += [runs.stamps, runs.sums, runs.actors]
-    return Call(load("bulk_add_edges"), script_keys, args + runs.tails)
+    args += [runs.stamps, runs.sums, runs.actors, runs.sizes]
+    return Call(load("bulk_add_edges"), script_keys, [*args, *runs.names])
 
 
 def bulk_read_authors(posts: list[bytes]) -> Call:

@@ -9,7 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from service.store.bulk_calls import PeopleRuns, PostRuns
-from service.store.calls import Argument
 from service.store.pieces import INTERACTION
 
 RAW_EDGES = 16
@@ -155,11 +154,11 @@ class PeopleSide:
         a, b = int(self.groups.first[first]), int(self.groups.first[end])
         width, heads = _PIECE.itemsize, self._heads
         pieces = [heads[width * i : width * i + width] + self._names[i] for i in range(a, b)]
-        ids, counts = self._person_ids[first:end], self.groups.counts[first:end].tolist()
-        tails = _flat(zip(ids, counts, self._sizes[first:end].tolist(), strict=True))
+        sizes = np.column_stack([self.groups.counts[first:end], self._sizes[first:end]]).astype("<u4").tobytes()
         ids_run, edges_run = self._ids[8 * a : 8 * b], self._edges[16 * a : 16 * b]
         authors_run = authors[8 * a : 8 * b]
-        return PeopleRuns(self._people[first:end], ids_run, edges_run, authors_run, b"".join(pieces), tails)
+        names = self._person_ids[first:end]
+        return PeopleRuns(self._people[first:end], ids_run, edges_run, authors_run, b"".join(pieces), sizes, names)
 
 
 class PostsSide:
@@ -200,9 +199,9 @@ class PostsSide:
         width = self._sum_bytes
         sums = self._sums[width * int(self._sums_first[first]) : width * int(self._sums_first[end])]
         counts = (self._raw_first, self._sums_first, self.groups.first)
-        columns = [np.diff(starts[first : end + 1]).tolist() for starts in counts]
-        tails = _flat(zip(self._post_ids[first:end], *columns, strict=True))
-        return PostRuns(self._posts[first:end], stamps, sums, self._actors[8 * a : 8 * b], tails)
+        sizes = np.column_stack([np.diff(starts[first : end + 1]) for starts in counts]).astype("<u4").tobytes()
+        actors, names = self._actors[8 * a : 8 * b], self._post_ids[first:end]
+        return PostRuns(self._posts[first:end], stamps, sums, actors, sizes, names)
 
 
 def folded(
@@ -242,10 +241,6 @@ def folded(
 def _starts(group: NDArray[np.intp], groups: int) -> NDArray[np.intp]:
     """Say where each group begins among rows that are in order of group, and where the last one ends."""
     return np.searchsorted(group, np.arange(groups + 1))
-
-
-def _flat(rows: Any) -> list[Argument]:  # noqa: ANN401  tuples of different lengths
-    return [one for row in rows for one in row]
 
 
 def per_row(groups: Groups, values: NDArray[Any]) -> NDArray[Any]:

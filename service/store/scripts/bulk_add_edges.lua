@@ -5,13 +5,14 @@
 --   ARGV[3] lifetime, ms · ARGV[4] half-lives, ms (packed doubles) ·
 --   ARGV[5] stamps of edges that may stay as they are, post by post and in order of time (8 bytes each) ·
 --   ARGV[6] running sums of the edges that are older, post by post (kinds as in lib/post.lua) · ARGV[7] actors of all
---   edges, post by post (8 bytes each) · then for each post: id, number of stamps, number of kinds, number of edges
+--   edges, post by post (8 bytes each) · ARGV[8] for each post the numbers of stamps, of kinds and of edges (4 bytes
+--   each) · then for each post: id
 -- Returns {} with nothing done where some entry was applied here before, or
 -- {hashes of the posts' authors (8 bytes each, zeros unknown), for each post the numbers of its stamps and of its kinds
 -- now (2 bytes each), all stamps, all kinds, places of posts, from 1, where another id has this hash}
 -- Costs 2 commands and 2 a post, 4 where the author is not known yet.
 local now_ms, ttl_ms, half_lives = tonumber(ARGV[2]), tonumber(ARGV[3]), doubles(ARGV[4])
-local stamps, sums, actors = ARGV[5], ARGV[6], ARGV[7]
+local stamps, sums, actors, numbers = ARGV[5], ARGV[6], ARGV[7], ARGV[8]
 local layout = kind_layout(#half_lives)
 local KIND_SIZE = struct.size(layout)
 
@@ -65,11 +66,14 @@ end
 local function fold_run(kinds, edges, last)
   local by_code, order = {}, {}
   for at = 1, last, 8 do
-    local code = stamp_code(string.sub(edges, at, at + 1))
-    if not by_code[code] then
-      by_code[code], order[#order + 1] = {}, code
+    local low, high = string.byte(edges, at, at + 1)
+    local code = low + high * 256
+    local times = by_code[code]
+    if not times then
+      times = {}
+      by_code[code], order[#order + 1] = times, code
     end
-    table.insert(by_code[code], stamp_ms(edges, at))
+    times[#times + 1] = stamp_ms(edges, at)
   end
   for _, code in ipairs(order) do
     local times = by_code[code]
@@ -126,30 +130,43 @@ end
 if not once_all(KEYS[1], sources()) then
   return {}
 end
+-- Open a post for this id. Of one with no id only a withdrawal by hash can be known: lib/post.lua writes the id there.
+local function opened(key, id)
+  local value = redis.call('GET', key)
+  local post = open_post(value, id)
+  if post.id ~= '' then
+    return post, value
+  end
+  local whole = read_post(value, #half_lives)
+  whole.id = id
+  value = write_post(key, whole, #half_lives, ttl_ms, now_ms)
+  return open_post(value, id), value
+end
+
+-- Note who made edges before the author was known.
+local function note_early(key, early, value)
+  if value or not redis.call('SET', key, early, 'NX', 'PX', ARGV[3]) then
+    redis.call('APPEND', key, early)
+    redis.call('PEXPIRE', key, ARGV[3])
+  end
+end
+
 local stamp_at, kind_at, actor_at = 1, 1, 1
 for place = 1, (#KEYS - 1) / 2 do
-  local a, id = 4 * place + 4, ARGV[4 * place + 4]
-  local stamp_last = stamp_at + 8 * ARGV[a + 1] - 1
-  local kind_last = kind_at + KIND_SIZE * ARGV[a + 2] - 1
-  local actor_last = actor_at + 8 * ARGV[a + 3] - 1
-  local post = open_post(redis.call('GET', KEYS[2 * place]), id)
-  if post.id == '' then
-    -- Until now only a withdrawal by hash could be known of it: the record's own functions write the id.
-    local whole = read_post(redis.call('GET', KEYS[2 * place]), #half_lives)
-    whole.id = id
-    write_post(KEYS[2 * place], whole, #half_lives, ttl_ms, now_ms)
-    post = open_post(redis.call('GET', KEYS[2 * place]), id)
-  end
+  local id, key = ARGV[8 + place], KEYS[2 * place]
+  local stamp_n, kind_n, actor_n = struct.unpack('<I4I4I4', numbers, 12 * place - 11)
+  local stamp_last, kind_last = stamp_at + 8 * stamp_n - 1, kind_at + KIND_SIZE * kind_n - 1
+  local actor_last = actor_at + 8 * actor_n - 1
+  local post, value = opened(key, id)
   if post.id ~= id then
     refused[#refused + 1] = place
     counts[place] = '\0\0\0\0'
   else
     add_run(post, string.sub(stamps, stamp_at, stamp_last), string.sub(sums, kind_at, kind_last))
     if post.author_hash == NOBODY then
-      redis.call('APPEND', KEYS[2 * place + 1], string.sub(actors, actor_at, actor_last))
-      redis.call('PEXPIRE', KEYS[2 * place + 1], ttl_ms)
+      note_early(KEYS[2 * place + 1], string.sub(actors, actor_at, actor_last), value)
     end
-    counts[place] = close_post(KEYS[2 * place], post, KIND_SIZE, ttl_ms, now_ms)
+    counts[place] = close_post(key, post, KIND_SIZE, ttl_ms, now_ms)
     all_edges[#all_edges + 1], all_sums[#all_sums + 1] = post.edges, post.sums
   end
   authors[place] = post.author_hash

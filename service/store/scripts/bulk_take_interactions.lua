@@ -5,16 +5,18 @@
 -- ARGV[1] now, microseconds · ARGV[2] oldest time kept, ms · ARGV[3] lifetime of the keys, ms ·
 --   ARGV[4] most edges a person may have · ARGV[5] id hashes of all events, person by person (8 bytes each, none
 --   twice for one person) · ARGV[6] edges beside them (16 bytes each) · ARGV[7] hashes of the posts' authors beside
---   them (8 bytes each, zeros unknown) · ARGV[8] their outbox pieces, packed · then for each person: id,
---   number of events, bytes of pieces
+--   them (8 bytes each, zeros unknown) · ARGV[8] their outbox pieces, packed · ARGV[9] for each person the number of
+--   events and of bytes of pieces (4 bytes each) · then for each person: id
 -- Returns {number or 0, low, {place of a person, from 1, and a digit for each event, for those where not all were
 -- taken}, outstanding entries of repeated events}; digits are the outcomes of take_interactions.lua
--- Costs 5 to 13 commands a person and 4 in all.
+-- Costs 5 to 14 commands a person and 4 in all.
 local now_us, oldest_ms, ttl_ms, limit = ARGV[1], tonumber(ARGV[2]), ARGV[3], tonumber(ARGV[4])
-local all_ids, all_edges, all_who, all_pieces = ARGV[5], ARGV[6], ARGV[7], ARGV[8]
+local all_ids, all_edges, all_who, all_pieces, sizes = ARGV[5], ARGV[6], ARGV[7], ARGV[8], ARGV[9]
 local NOBODY = string.rep('\0', 8)
 -- What has at least this long to live is not prolonged: it makes less than an hour of more than a day to spare.
 local FRESH_MS = tonumber(ttl_ms) - 3600000
+-- Ids of a row that is rewritten rather than appended to (lib/rows.lua).
+local REWRITTEN_IDS = REWRITTEN_BYTES / 2
 local outstanding, wanted = nil, {}
 local starts, ends, kept, whole, exceptions = {}, {}, {}, true, {}
 
@@ -44,16 +46,15 @@ local function judge(person, id_hash, edge_ms)
   return find_slot(person.undo, id_hash, 16) and 5 or 0
 end
 
--- Whether a run may be appended as it is; `found` are ids, name, erased, undo and heard.
-local function simple(old, found, id, ids)
-  if found[3] or found[4] or (found[2] and found[2] ~= id) or #old + #ids > 8 * limit then
+-- Whether a run may be appended as it is.
+local function simple(old, known, erased, undo, heard, id, ids)
+  if erased or undo or (known and known ~= id) or #old + #ids > 8 * limit then
     return false
   end
-  local heard = found[5] or ''
   if old ~= '' or heard ~= '' then
     for at = 1, #ids, 8 do
       local id_hash = string.sub(ids, at, at + 7)
-      if find_slot(old, id_hash, 8) or find_slot(heard, id_hash, 16) then
+      if find_slot(old, id_hash, 8) or (heard ~= '' and find_slot(heard, id_hash, 16)) then
         return false
       end
     end
@@ -92,60 +93,56 @@ end
 local function keep_name(name_key, known, id)
   if not known then
     redis.call('SET', name_key, id, 'PX', ttl_ms)
-  elseif redis.call('PTTL', name_key) >= 0 then
+    return
+  end
+  local left_ms = redis.call('PTTL', name_key)
+  if left_ms >= 0 and left_ms < FRESH_MS then
     redis.call('PEXPIRE', name_key, ttl_ms)
   end
 end
 
-local function append(k, old, edges, ids, who)
-  local row_key, ids_key, who_key = KEYS[k], KEYS[k + 1], KEYS[k + 2]
-  if not old then
-    redis.call('SET', row_key, edges, 'PX', ttl_ms)
-    redis.call('SET', ids_key, ids, 'PX', ttl_ms)
-    redis.call('SET', who_key, who, 'PX', ttl_ms)
-    return
-  end
-  redis.call('APPEND', row_key, edges)
-  redis.call('APPEND', ids_key, ids)
-  redis.call('APPEND', who_key, who)
-  if redis.call('PTTL', row_key) < FRESH_MS then
-    redis.call('PEXPIRE', row_key, ttl_ms)
-    redis.call('PEXPIRE', ids_key, ttl_ms)
-    redis.call('PEXPIRE', who_key, ttl_ms)
-    keep_name(KEYS[k + 3], true)
+local function append_all(k, old_row, old_ids, old_who, edges, ids, who)
+  if #old_ids + #ids <= REWRITTEN_IDS then
+    redis.call('SET', KEYS[k], old_row .. edges, 'PX', ttl_ms)
+    redis.call('SET', KEYS[k + 1], old_ids .. ids, 'PX', ttl_ms)
+    redis.call('SET', KEYS[k + 2], old_who .. who, 'PX', ttl_ms)
+  else
+    for i, added in ipairs({ edges, ids, who }) do
+      redis.call('APPEND', KEYS[k + i - 1], added)
+      redis.call('PEXPIRE', KEYS[k + i - 1], ttl_ms)
+    end
   end
 end
 
-local function row_begins_ms(row_key)
-  local head = redis.call('GETRANGE', row_key, 0, 15)
-  return #head == 16 and slot_ms(head, 1) or math.huge
+local function read_lists(k)
+  local found =
+    redis.call('MGET', KEYS[k], KEYS[k + 1], KEYS[k + 2], KEYS[k + 3], KEYS[k + 4], KEYS[k + 5], KEYS[k + 6])
+  return found[1] or '', found[2] or '', found[3] or '', found[4], found[5], found[6], found[7] or ''
 end
 
 local at, piece_at = 1, 1
 for place = 1, (#KEYS - 2) / 7 do
-  local k, a = 7 * place - 4, 3 * place + 6
-  local last, piece_last = at + ARGV[a + 1] - 1, piece_at + ARGV[a + 2] - 1
+  local k, id = 7 * place - 4, ARGV[9 + place]
+  local count, piece_bytes = struct.unpack('<I4I4', sizes, 8 * place - 7)
+  local last, piece_last = at + count - 1, piece_at + piece_bytes - 1
   local ids, edges = string.sub(all_ids, 8 * at - 7, 8 * last), string.sub(all_edges, 16 * at - 15, 16 * last)
   local who = string.sub(all_who, 8 * at - 7, 8 * last)
-  local found = redis.call('MGET', KEYS[k + 1], KEYS[k + 3], KEYS[k + 4], KEYS[k + 5], KEYS[k + 6])
-  local old = found[1]
-  if old and row_begins_ms(KEYS[k]) < oldest_ms then
+  local old_row, old_ids, old_who, known, erased, undo, heard = read_lists(k)
+  if old_row ~= '' and slot_ms(old_row, 1) < oldest_ms then
     trim_row(KEYS[k], KEYS[k + 1], KEYS[k + 2], oldest_ms)
-    old = redis.call('GET', KEYS[k + 1])
+    old_row, old_ids, old_who = read_lists(k)
   end
-  if simple(old or '', found, ARGV[a], ids) then
-    if not old or not found[2] then
-      keep_name(KEYS[k + 3], found[2], ARGV[a])
-    end
+  if simple(old_ids, known, erased, undo, heard, id, ids) then
+    keep_name(KEYS[k + 3], known, id)
     starts[place], ends[place] = piece_at, piece_last
   else
-    local person = { ids = old or '', count = #(old or '') / 8, undo = found[4] or '', heard = found[5] or '',
-      id = ARGV[a], name_key = KEYS[k + 3], erased_key = KEYS[k + 4] }
+    local person = { ids = old_ids, count = #old_ids / 8, undo = undo or '', heard = heard, id = id,
+      name_key = KEYS[k + 3], erased_key = KEYS[k + 4] }
     ids, edges, who, kept[place] = picked(place, person, ids, edges, who, piece_at)
     whole = false
   end
   if ids ~= '' then
-    append(k, old, edges, ids, who)
+    append_all(k, old_row, old_ids, old_who, edges, ids, who)
   end
   at, piece_at = last + 1, piece_last + 1
 end

@@ -18,10 +18,10 @@ end
 local function close_post(key, post, kind_size, ttl_ms, now_ms)
   local px = ttl_ms
   if post.created > 0 then
-    px = math.max(1, math.min(ttl_ms, post.created + 12 * ttl_ms - now_ms))
+    px = string.format('%.0f', math.max(1, math.min(ttl_ms, post.created + 12 * ttl_ms - now_ms)))
   end
   local counts = struct.pack('<HH', #post.edges / 8, #post.sums / kind_size)
   local value = string.sub(post.head, 1, 4) .. counts .. string.sub(post.head, 9) .. post.edges .. post.sums
-  redis.call('SET', key, value, 'PX', string.format('%.0f', px))
+  redis.call('SET', key, value, 'PX', px)
   return counts
 end
