@@ -162,3 +162,21 @@ def test_a_person_is_never_given_more_than_the_limit(redis_db: str, monkeypatch:
     assert (summary.applied, summary.rejected) == (5, 3)
     assert [one.line for one in summary.first_rejected] == [6, 7, 8]
     assert "this person has reached what is kept for one person" in summary.first_rejected[0].reason
+
+
+def test_long_rows_are_appended_to(redis_db: str) -> None:
+    """Where a row is too long to be written anew, what is appended ends in the same state too, ids found again."""
+    world = random_world(1, people=2, posts=1, events=0)
+    like = {"type": "interaction", "actor": "joel", "kind": "like"}
+    events = [like | {"id": f"l{n}", "post": f"bed{n % 40}", "at": world.now_ms - 7_000 * n} for n in range(2_300)]
+    _, expected = loaded(redis_db, world, in_calls([events], world.now_ms))
+
+    def load(engine: Any, run: Run) -> list[int]:
+        parts = (events[:2_000], events[2_000:], events[1_990:2_010])
+        return [bulk_load(engine, run, part, world.now_ms, 5_000).applied for part in parts]
+
+    applied, actual = loaded(redis_db, world, load)
+    assert applied == [2_000, 300, 0]
+    assert actual.keys() == expected.keys()
+    for key in expected:
+        assert same(actual[key], expected[key]), key

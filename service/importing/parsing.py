@@ -4,6 +4,7 @@ import contextlib
 import multiprocessing
 import signal
 from multiprocessing.connection import Connection
+from multiprocessing.process import BaseProcess
 from typing import Final, Self, cast
 
 from service.importing.columns import Columns, HashMany, Reader
@@ -27,6 +28,7 @@ class Parser:
         self._hash_many = IdHasher(hash_key).hash_many
         self._line: Connection | None = None
         self._gone = False
+        self.process: BaseProcess | None = None
 
     def __enter__(self) -> Self:
         return self
@@ -53,7 +55,8 @@ class Parser:
     def _start(self) -> Connection:
         context = multiprocessing.get_context("spawn")
         ours, theirs = context.Pipe()
-        context.Process(target=_serve, args=(theirs, self._hash_key), daemon=True).start()
+        self.process = context.Process(target=_serve, args=(theirs, self._hash_key), daemon=True)
+        self.process.start()
         theirs.close()
         return ours
 
