@@ -91,11 +91,12 @@ class BulkIngest:
             StoreUnavailable: the store does not answer; the same again ends in the same state.
 
         """
-        groups = grouped(edges.posts, edges.at_ms)
-        authors, people = await asyncio.gather(self._authors(groups), asyncio.to_thread(PeopleSide, edges))
+        people = asyncio.create_task(asyncio.to_thread(PeopleSide, edges))
+        groups = await asyncio.to_thread(grouped, edges.posts, edges.at_ms)
+        authors = await self._authors(groups)
         building = asyncio.create_task(asyncio.to_thread(PostsSide, edges, groups, now_ms, self._half_lives_ms))
         try:
-            outcomes, entries = await self._take(people, authors, now_ms)
+            outcomes, entries = await self._take(await people, authors, now_ms)
         finally:
             side = await building
         if not entries:
