@@ -62,9 +62,9 @@ local function simple(old, known, erased, undo, heard, id, ids)
   return true
 end
 
-local function piece_end(at)
-  local a, b, c, d = string.byte(all_pieces, at + 1, at + 4)
-  return at + 4 + a + b * 256 + c * 65536 + d * 16777216
+local function integer(text, at)
+  local a, b, c, d = string.byte(text, at, at + 3)
+  return a + b * 256 + c * 65536 + d * 16777216
 end
 
 -- Judge a run event by event. Returns what is to be appended, and the pieces of what is taken.
@@ -72,7 +72,7 @@ local function picked(place, person, ids, edges, who, piece_at)
   local digits, new_ids, new_edges, new_who, pieces = {}, {}, {}, {}, {}
   for i = 1, #ids / 8 do
     local id_hash, edge = string.sub(ids, 8 * i - 7, 8 * i), string.sub(edges, 16 * i - 15, 16 * i)
-    local author, last = string.sub(who, 8 * i - 7, 8 * i), piece_end(piece_at)
+    local author, last = string.sub(who, 8 * i - 7, 8 * i), piece_at + 4 + integer(all_pieces, piece_at + 1)
     local outcome = judge(person, id_hash, slot_ms(edge, 1))
     if outcome == 5 then
       edge = string.sub(edge, 1, 9) .. string.char(string.byte(edge, 10) + 128) .. string.sub(edge, 11)
@@ -123,7 +123,7 @@ end
 local at, piece_at = 1, 1
 for place = 1, (#KEYS - 2) / 7 do
   local k, id = 7 * place - 4, ARGV[9 + place]
-  local count, piece_bytes = struct.unpack('<I4I4', sizes, 8 * place - 7)
+  local count, piece_bytes = integer(sizes, 8 * place - 7), integer(sizes, 8 * place - 3)
   local last, piece_last = at + count - 1, piece_at + piece_bytes - 1
   local ids, edges = string.sub(all_ids, 8 * at - 7, 8 * last), string.sub(all_edges, 16 * at - 15, 16 * last)
   local who = string.sub(all_who, 8 * at - 7, 8 * last)
