@@ -3,6 +3,7 @@
 import asyncio
 import random
 from collections.abc import Callable, Coroutine, Sequence
+from dataclasses import replace
 from typing import Any
 
 import pytest
@@ -180,3 +181,21 @@ def test_long_rows_are_appended_to(redis_db: str) -> None:
     assert actual.keys() == expected.keys()
     for key in expected:
         assert same(actual[key], expected[key]), key
+
+
+@pytest.mark.parametrize("named_changes", [0, bulk.NAMED_CHANGES])
+async def test_a_worker_that_remembers_shows_an_import_at_once(
+    redis_db: str, monkeypatch: pytest.MonkeyPatch, named_changes: int
+) -> None:
+    """Feeds that were read before are right after an import elsewhere, whether it names what changed or not."""
+    monkeypatch.setattr(bulk, "NAMED_CHANGES", named_changes)
+    world = random_world(21, people=6, posts=8, events=200, shares={"interaction": 9, "post": 2, "tie": 3})
+    before = replace(world, events=world.events[:120])
+    flush(redis_db)
+    engine = make_engine(redis_db, world.policy_toml)
+    await engine.start(background=False)
+    await send(engine, before.events, world.now_ms)
+    await assert_as_oracle(engine, world, before.oracle())
+    await asyncio.to_thread(import_apart, redis_db, world, world.events[120:], 1_000)
+    await assert_as_oracle(engine, world, world.oracle())
+    await engine.close()

@@ -99,6 +99,7 @@ class BulkIngest:
             outcomes, entries = await self._take(await people, authors, now_ms)
         finally:
             side = await building
+        del people
         if not entries:
             return outcomes
         taken = np.flatnonzero(outcomes == APPLIED)
