@@ -1,11 +1,12 @@
 """Take lines apart in a process of their own, so that the one that feeds the server is not held up."""
 
 import contextlib
+import dataclasses
 import multiprocessing
 import signal
 from multiprocessing.connection import Connection
 from multiprocessing.process import BaseProcess
-from typing import Final, Self, cast
+from typing import Final, Self
 
 from service.importing.columns import Columns, HashMany, Reader
 from service.importing.windows import Window
@@ -13,6 +14,9 @@ from service.store.ids import IdHasher
 
 WORTH_A_PROCESS: Final = 50_000
 """Fewer lines than these are taken apart at once: a process takes half a second to start."""
+
+_FIELDS: Final = tuple(field.name for field in dataclasses.fields(Columns))
+"""They are sent one by one, as each message is held twice for a moment."""
 
 
 class Parser:
@@ -47,7 +51,7 @@ class Parser:
             self._line.send(len(window.blocks))
             for block in window.blocks:
                 self._line.send(block)
-            return cast("Columns", self._line.recv())
+            return Columns(*[self._line.recv() for _ in _FIELDS])
         except (EOFError, OSError):
             self._gone = True
             return _read_here(self._hash_many, window)
@@ -77,4 +81,7 @@ def _serve(line: Connection, hash_key: bytes) -> None:
             reader = Reader(hash_many)
             for _ in range(line.recv()):
                 reader.add(line.recv().lines())
-            line.send(reader.columns())
+            columns = reader.columns()
+            for name in _FIELDS:
+                line.send(getattr(columns, name))
+            del reader, columns
