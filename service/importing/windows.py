@@ -8,7 +8,7 @@ from typing import BinaryIO, Final
 from service.importing.archives import DAMAGE
 from service.importing.lines import LINE_BYTES, DamagedError, Line
 
-WINDOW_LINES: Final = 600_000
+WINDOW_LINES: Final = 550_000
 WINDOW_BYTES: Final = 96 << 20
 FIRST_LINES: Final = 100_000
 """The first window is smaller, so that the server soon has something to do."""
