@@ -116,8 +116,8 @@ def windows(
         DamagedError: it can't be read to its end; all whole lines before are in the windows given.
 
     >>> import io
-    >>> [(w.first, [b.text for b in w.blocks]) for w in windows(io.BytesIO(b"one\n\ntwo"), 2)]
-    [(2, [b'', b'two'])]
+    >>> [(w.first, w.count, w.line(1)) for w in windows(io.BytesIO(b"one\n\ntwo"), 2)]
+    [(2, 2, Line(number=3, content=b'two'))]
 
     """
     window, number, later_lines = Window(from_line), 0, most_lines or WINDOW_LINES
