@@ -227,6 +227,10 @@ class StoreUnavailable(WaxwaneError):
         self.retry_after_s = retry_after_s
 
 
+class StoreRefused(StoreUnavailable):
+    """The store is there and refused a command: out of memory, read-only, or a key that is not what it should be."""
+
+
 class Overloaded(WaxwaneError):
     """The service is shedding load; nothing of the call was acknowledged.
 

@@ -1,11 +1,13 @@
 """Fixtures that many tests share."""
 
+import logging
 import os
 from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
 import redis
+import structlog
 
 from service.embedded import EmbeddedServer
 from service.settings import PREFIX
@@ -16,6 +18,16 @@ def _no_settings_from_outside(monkeypatch: pytest.MonkeyPatch) -> None:
     """Keep the settings of whoever runs the tests out of them."""
     for name in [name for name in os.environ if name.upper().startswith(PREFIX)]:
         monkeypatch.delenv(name)
+
+
+@pytest.fixture(autouse=True)
+def _logging_as_it_was() -> Iterator[None]:
+    """Leave logging as it was, whatever a test configures."""
+    root = logging.getLogger()
+    handlers, level = root.handlers[:], root.level
+    yield
+    root.handlers, root.level = handlers, level
+    structlog.reset_defaults()
 
 
 @pytest.fixture(scope="session")

@@ -12,6 +12,7 @@ from scoring.policy import Policy
 from scoring.ranking import compile_policy
 from service.feed import board
 from service.feed.board import BoardReader, CrowdBound
+from service.feed.policies import PolicyBook
 from service.store import keys
 from service.store.store import board_slots
 from tests.rankings import DAY_MS, EXACT, FITTED, HORIZON_MS, HOUR_MS, KINDS, NOW_MS, hashes, ranking
@@ -110,6 +111,21 @@ def test_the_fastest_board_that_bounds_a_curve_closely_is_read(half_life_ms: flo
         (b"ZREVRANGE", keys.board(slot), 0, 499, b"WITHSCORES"),
         (b"GET", keys.floor(slot)),
     ]
+
+
+def test_a_policys_board_bounds_the_oldest_edge_of_any_feed() -> None:
+    """With a short retention too: a post's oldest edge, ranked as of 30 days ahead, is within the bound's horizon."""
+    retention_ms = 3 * int(DAY_MS)
+    book = PolicyBook(DEFAULT_BANK, SLOTS, retention_ms)
+    text = 'name = "slow"\nweights = { like = 1 }\nfreshness = { curve = "power", scale = "6h", exponent = 1.0 }\n'
+    book.put(book.read(text))
+    prepared = book.prepared("slow", ["like"])
+    half_life_ms = DEFAULT_BANK.half_lives_ms[prepared.board.slot]
+    for age_ms in np.linspace(0, 13 * retention_ms + 30 * DAY_MS, 500).tolist():
+        mark = (NOW_MS - age_ms) / half_life_ms
+        state = prepared.board.read([[(1).to_bytes(8, "little"), repr(mark).encode()], None])
+        crowd = prepared.ranking.crowd_freshness(np.array([age_ms]))[0]
+        assert prepared.board.bound(state, set(), NOW_MS).bound[0] >= crowd
 
 
 def test_without_weights_there_is_no_crowd() -> None:

@@ -182,6 +182,14 @@ def test_policy_file_away(tmp_path: Path) -> None:
     assert message == f"policies: {tmp_path}/none.toml can't be read: No such file or directory"
 
 
+def test_policy_file_of_other_letters(tmp_path: Path) -> None:
+    """A policy file that is not UTF-8 is named, with the place."""
+    file = tmp_path / "latin.toml"
+    file.write_bytes(b'name = "b\xe4ume"')
+    message = refused("joel", "--store", "redis://localhost:1", "--policies", str(file))
+    assert message == f"policies: {file} can't be read: it is not UTF-8 from byte 9 on"
+
+
 def test_embedded_store(tmp_path: Path) -> None:
     """The embedded store is read whether its service runs or not."""
     with EmbeddedServer(tmp_path / "data") as server:

@@ -10,8 +10,12 @@ from typing import Any
 
 import orjson
 import pytest
+from structlog.testing import capture_logs
 
 from service.engine import Engine
+from service.errors import StoreRefused
+from service.settings import BUILT_IN_POLICY
+from service.store import keys
 from service.store.calls import Call
 from service.store.connection import Connection
 from tests.engines import assert_as_oracle, flush, make_engine, ranked, running, send
@@ -167,3 +171,42 @@ async def test_workers_that_send_the_same_events_at_once_count_them_once(redis_d
     for engine in engines:
         await assert_as_oracle(engine, world, world.oracle())
         await engine.close()
+
+
+NOW_MS = 1_777_885_200_000
+PAIR = [
+    {"id": f"p-{actor}", "type": "post", "at": NOW_MS, "actor": actor, "post": f"bed of {actor}", "form": "note"}
+    for actor in ("mina", "joel")
+]
+
+
+async def test_an_entry_that_cannot_be_finished_keeps_no_other_open(redis_db: str) -> None:
+    """Where the store refuses one entry's effects, the others are finished, and the log says what the server said."""
+    tie = {"id": "t", "type": "tie", "at": NOW_MS, "actor": "ada", "target": "joel", "relation": "follow"}
+    async with running(redis_db, BUILT_IN_POLICY.read_text()) as engine:
+        await send(engine, [tie], NOW_MS)
+        with pytest.MonkeyPatch.context() as patch:
+            end_after(patch, 3)  # the kind, and both events taken
+            with pytest.raises(Killed):
+                await send(engine, PAIR, NOW_MS)
+        spoilt = keys.key("post", engine.store.hasher.hash("bed of mina"))
+        await engine.store.connection.read("SADD", spoilt, "not a post")
+        with capture_logs() as logs:
+            assert await engine.store.finish_open_entries(NOW_MS) == 1
+        assert {one["event"] for one in logs} == {"store_refused", "entry_left_open"}
+        assert all("WRONGTYPE" in one["reason"] for one in logs)
+        assert [post for post, _ in await ranked(engine, "ada", NOW_MS)] == ["bed of joel"]
+        await engine.store.connection.read("DEL", spoilt)
+        assert await engine.store.finish_open_entries(NOW_MS) == 1
+        assert await engine.store.finish_open_entries(NOW_MS) == 0
+
+
+async def test_a_refused_command_is_told_without_its_keys(redis_db: str) -> None:
+    """The caller learns that the store refused, and the kind of its error; the event stays sendable."""
+    async with running(redis_db, BUILT_IN_POLICY.read_text()) as engine:
+        heard = keys.key("heard", engine.store.hasher.hash("mina"))
+        await engine.store.connection.read("SADD", heard, "not a list")
+        with pytest.raises(StoreRefused, match=r"^the store refused a command: WRONGTYPE;"):
+            await send(engine, PAIR, NOW_MS)
+        await engine.store.connection.read("DEL", heard)
+        assert [one.outcome for one in await send(engine, PAIR, NOW_MS)] == ["applied", "duplicate"]

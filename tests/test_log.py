@@ -2,22 +2,11 @@
 
 import json
 import logging
-from collections.abc import Iterator
 
 import pytest
 import structlog
 
 from service import log
-
-
-@pytest.fixture(autouse=True)
-def _restore() -> Iterator[None]:
-    """Leave logging as it was."""
-    root = logging.getLogger()
-    handlers, level = root.handlers[:], root.level
-    yield
-    root.handlers, root.level = handlers, level
-    structlog.reset_defaults()
 
 
 def lines(capsys: pytest.CaptureFixture[str]) -> list[str]:

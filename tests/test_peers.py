@@ -39,7 +39,7 @@ async def test_all_ways_agree_and_are_timed(tmp_path: Any, monkeypatch: pytest.M
             ],
             "ingest": [{"batch": 500, "events_per_s": 9.0}],
             "import": {"events_per_s": 5.0, "peak_mib": 6.0},
-            "memory": {"bytes_per_edge": 7.0, "bytes_per_post": 8.0},
+            "memory": {"bytes_per_edge_of_rows": 7.0, "bytes_per_post": 8.0},
         }
     )
     by_name = {name: value for name, value, _ in targets}

@@ -10,7 +10,7 @@ from redis.asyncio.retry import Retry
 from redis.backoff import NoBackoff
 from redis.exceptions import RedisError, ResponseError
 
-from service.errors import StoreUnavailable
+from service.errors import StoreRefused, StoreUnavailable
 from service.store.calls import Argument, Call
 from service.store.line import Line
 from service.store.scripts import load, names
@@ -193,4 +193,4 @@ def _unavailable(error: Exception) -> StoreUnavailable:
     if not isinstance(error, ResponseError):
         return StoreUnavailable(f"the store failed: {type(error).__name__}")
     log.error("store_refused", reason=str(error)[:_SHOWN_CHARS])
-    return StoreUnavailable(f"the store refused a command: {str(error).split(' ', 1)[0][:32]}")
+    return StoreRefused(f"the store refused a command: {str(error).split(' ', 1)[0][:32]}")

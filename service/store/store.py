@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import structlog
 
 from scoring.bank import Bank
-from service.errors import StoreUnavailable, WaxwaneError
+from service.errors import StoreRefused, WaxwaneError
 from service.events.model import AnyEvent
 from service.periodic import Periodic
 from service.store import keys
@@ -187,8 +187,8 @@ class Store:
             # Nothing is known of the low mark here: 0 prunes nothing and is always true.
             try:
                 await self.driver.drive([Entry.read(number, 0, member)], now_ms, {})
-            except StoreUnavailable as error:
-                log.warning("entry_left_open", bucket=number, reason=str(error))
+            except (StoreRefused, ValueError, LookupError) as error:  # one that is broken must not keep others open
+                log.warning("entry_left_open", bucket=number, reason=f"{type(error).__name__}: {error}")
             else:
                 done += 1
         return done
@@ -221,6 +221,6 @@ class Store:
         newest_us = (int(server_time[0]) - _LEFT_ALONE_S) * 1_000_000
         left = [entry for entry in entries if entry in self._open_before and int(entry[1][:SEQ_DIGITS]) <= newest_us]
         self._open_before = frozenset(entries)
-        if await self._drive_all(left, int(server_time[0]) * 1000):
-            log.info("finished_open_entries", entries=len(left))
+        if done := await self._drive_all(left, int(server_time[0]) * 1000):
+            log.info("finished_open_entries", entries=done)
         await self.trim_boards()
