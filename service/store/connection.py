@@ -1,5 +1,6 @@
 """The connection to Redis: timeouts chosen on purpose, no silent retries, the client's errors translated."""
 
+import re
 from collections.abc import AsyncIterator, Iterable, Sequence
 from contextlib import asynccontextmanager
 from typing import Any
@@ -19,6 +20,9 @@ log = structlog.get_logger("waxwane.store")
 
 WRITE_LINES = 4
 """Connections for writes: a small batch need not wait until a large one has been answered."""
+
+_IN_SCRIPT = re.compile(r"@user_script: ?\d+: ([A-Z]+) ")
+"""Where servers before Redis 7 put the kind of an error that a script met."""
 
 _SHORT = 512
 _LENGTHS = [b"\r\n$%d\r\n" % length for length in range(_SHORT)]
@@ -193,4 +197,6 @@ def _unavailable(error: Exception) -> StoreUnavailable:
     if not isinstance(error, ResponseError):
         return StoreUnavailable(f"the store failed: {type(error).__name__}")
     log.error("store_refused", reason=str(error)[:_SHOWN_CHARS])
-    return StoreRefused(f"the store refused a command: {str(error).split(' ', 1)[0][:32]}")
+    inside = _IN_SCRIPT.search(str(error))
+    kind = inside[1] if inside else str(error).split(" ", 1)[0][:32]
+    return StoreRefused(f"the store refused a command: {kind}")
